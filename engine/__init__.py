@@ -1,0 +1,1 @@
+"""The engine's face: everything the service may import."""

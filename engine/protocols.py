@@ -1,0 +1,84 @@
+"""What the rooms expect of one another, as structural types.
+
+A model object holds either plain floats (one parameter set) or float64 columns of shape ``(rows, 1)`` (many sets
+at once); every method broadcasts its parameters against its arguments. ``tau`` is in years, ``z`` is the complex
+argument of the characteristic function of ``X = ln(S_T / F)``, ``p`` a real moment order.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar, Protocol, Self, Sequence
+
+from engine.arrays import Complexes, Floats
+
+__all__ = ["Model", "ParameterSpec"]
+
+
+@dataclass(frozen=True, slots=True)
+class ParameterSpec:
+    """One parameter of a model: its name, unit, admissible range and meaning in words."""
+
+    name: str
+    unit: str
+    lower: float
+    upper: float
+    description: str
+    lower_open: bool = False
+    upper_open: bool = False
+
+    @property
+    def allowed(self) -> str:
+        """The range in words, e.g. ``"-1 < rho < 1"``."""
+        left = "<" if self.lower_open else "<="
+        right = "<" if self.upper_open else "<="
+        return f"{self.lower:g} {left} {self.name} {right} {self.upper:g}"
+
+    def admits(self, value: float) -> bool:
+        """Whether ``value`` lies in the range (false for NaN)."""
+        low = self.lower < value if self.lower_open else self.lower <= value
+        high = value < self.upper if self.upper_open else value <= self.upper
+        return low and high
+
+
+class Model(Protocol):
+    """A published model of one underlying, as the transform sees it."""
+
+    name: ClassVar[str]
+    title: ClassVar[str]
+    source: ClassVar[str]
+    parameters: ClassVar[tuple[ParameterSpec, ...]]
+
+    @classmethod
+    def stack(cls, models: Sequence[Self]) -> Self:
+        """One object with columns of shape (rows, 1) out of many with floats."""
+        ...
+
+    def check(self) -> None:
+        """Raise InputError naming the first parameter outside its range."""
+        ...
+
+    def log_cf(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> Complexes:
+        """``log E[exp(i z X)]``. With ``along_path`` the last axis of ``z`` is a path that starts inside the
+        strip and avoids the imaginary axis; the logarithm is then continued along it."""
+        ...
+
+    def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
+        """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
+        ...
+
+    def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
+        """``log E[exp(p X)]`` for real ``p`` inside the strip."""
+        ...
+
+    def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
+        """``(p_lo, p_hi)``: inner approximations of the open interval of finite moments (may be -inf, inf)."""
+        ...
+
+    def log_envelope(self, p: Floats, u: Floats, tau: Floats | float) -> Floats:
+        """A proven majorant of ``log |phi(u - i p)|``, non-increasing in ``u >= 0``."""
+        ...
+
+    def mean_variance(self, tau: Floats | float) -> Floats:
+        """The expected quadratic variation over ``tau``: the scale of the density, squared."""
+        ...
