@@ -63,6 +63,12 @@ class Model(Protocol):
         strip and avoids the imaginary axis; the logarithm is then continued along it."""
         ...
 
+    def log_cf_sized(
+        self, z: Complexes, tau: Floats | float, *, along_path: bool = False
+    ) -> tuple[Complexes, Floats]:
+        """``log_cf`` and the cap on its absolute rounding error, in units of machine epsilon, in one evaluation."""
+        ...
+
     def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
         """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
         ...

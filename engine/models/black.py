@@ -1,0 +1,75 @@
+"""Black (1976): the forward is a driftless lognormal with one volatility.
+
+``log phi(z) = -(z^2 + i z) s^2 / 2`` with total variance ``s^2 = volatility^2 tau``; all moments exist; the modulus on
+``z = u - i p`` is exactly ``exp(s^2 (p^2 - p - u^2) / 2)``, which is its own envelope.
+
+Source: F. Black, "The pricing of commodity contracts", Journal of Financial Economics 3, 1976.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, ClassVar, Self, Sequence
+
+import numpy as np
+
+from engine.arrays import Complexes, Floats
+from engine.models.parameters import check_parameters, stack_columns
+from engine.protocols import ParameterSpec
+
+__all__ = ["Black"]
+
+
+@dataclass(frozen=True, slots=True)
+class Black:
+    """Black's model. ``volatility``: a float, or a column of shape (rows, 1) after ``stack``."""
+
+    volatility: Any
+
+    name: ClassVar[str] = "black"
+    title: ClassVar[str] = "Black 1976 lognormal forward"
+    source: ClassVar[str] = "F. Black, Journal of Financial Economics 3, 1976"
+    parameters: ClassVar[tuple[ParameterSpec, ...]] = (
+        ParameterSpec("volatility", "per square root of a year", 0.0, 10.0, "Volatility (0.2 is 20 %)."),
+    )
+
+    @classmethod
+    def stack(cls, models: Sequence[Self]) -> Self:
+        """One object with a column of shape (rows, 1) out of ``rows`` objects with floats."""
+        return cls(**stack_columns(models, ["volatility"]))
+
+    def check(self) -> None:
+        """Raise InputError if the volatility is outside its range."""
+        check_parameters(self, self.parameters)
+
+    def log_cf(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> Complexes:
+        """``log E[exp(i z X)]``; entire in ``z``, so paths need no care."""
+        return np.asarray(-0.5 * self.mean_variance(tau) * (z * (z + 1j)))
+
+    def log_cf_sized(
+        self, z: Complexes, tau: Floats | float, *, along_path: bool = False
+    ) -> tuple[Complexes, Floats]:
+        """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
+        value = self.log_cf(z, tau)
+        return value, 4.0 * np.abs(value)
+
+    def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
+        """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
+        return 4.0 * np.abs(self.log_cf(z, tau))
+
+    def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
+        """``log E[exp(p X)] = s^2 p (p - 1) / 2``."""
+        return np.asarray(0.5 * self.mean_variance(tau) * (p * (p - 1.0)))
+
+    def log_envelope(self, p: Floats, u: Floats, tau: Floats | float) -> Floats:
+        """``log |phi(u - i p)|`` exactly."""
+        return np.asarray(0.5 * self.mean_variance(tau) * (p * (p - 1.0) - u * u))
+
+    def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
+        """All moments exist: ``(-inf, inf)``."""
+        shape = np.broadcast_shapes(np.shape(self.volatility), np.shape(tau))
+        return np.full(shape, -np.inf), np.full(shape, np.inf)
+
+    def mean_variance(self, tau: Floats | float) -> Floats:
+        """Total variance ``volatility^2 tau``."""
+        return np.asarray(self.volatility * self.volatility * tau)
