@@ -10,7 +10,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import ClassVar, Protocol, Self, Sequence
 
-from engine.arrays import Complexes, Floats
+from engine.arrays import Complexes, Floats, Ints
 
 __all__ = ["Model", "ParameterSpec"]
 
@@ -54,6 +54,10 @@ class Model(Protocol):
         """One object with columns of shape (rows, 1) out of many with floats."""
         ...
 
+    def take(self, index: Ints) -> Self:
+        """Of a stacked object, the rows at ``index`` (shape (m,)): columns of shape (m, 1)."""
+        ...
+
     def check(self) -> None:
         """Raise InputError naming the first parameter outside its range."""
         ...
@@ -87,4 +91,9 @@ class Model(Protocol):
 
     def mean_variance(self, tau: Floats | float) -> Floats:
         """The expected quadratic variation over ``tau``: the scale of the density, squared."""
+        ...
+
+    def bend(self, tau: float) -> tuple[float, float]:
+        """``(k_inf, angle)`` of one parameter set: ``phi(z) ~ exp(i z k_inf)`` far out in the right half plane, and
+        the widest angle from the real axis within which ``phi`` stays bounded there, at most pi/2."""
         ...

@@ -13,8 +13,8 @@ from typing import Any, ClassVar, Self, Sequence
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats
-from engine.models.parameters import check_parameters, stack_columns
+from engine.arrays import Complexes, Floats, Ints
+from engine.models.parameters import check_parameters, stack_columns, take_rows
 from engine.protocols import ParameterSpec
 
 __all__ = ["Black"]
@@ -37,6 +37,10 @@ class Black:
     def stack(cls, models: Sequence[Self]) -> Self:
         """One object with a column of shape (rows, 1) out of ``rows`` objects with floats."""
         return cls(**stack_columns(models, ["volatility"]))
+
+    def take(self, index: Ints) -> Self:
+        """Of a stacked object, the rows at ``index``: columns of shape (m, 1)."""
+        return type(self)(**take_rows(self, ["volatility"], index))
 
     def check(self) -> None:
         """Raise InputError if the volatility is outside its range."""
@@ -73,3 +77,7 @@ class Black:
     def mean_variance(self, tau: Floats | float) -> Floats:
         """Total variance ``volatility^2 tau``."""
         return np.asarray(self.volatility * self.volatility * tau)
+
+    def bend(self, tau: float) -> tuple[float, float]:
+        """No linear phase; bounded within 45 degrees of the real axis."""
+        return 0.0, 0.25 * np.pi

@@ -20,8 +20,8 @@ from typing import Any, ClassVar, Self, Sequence
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats
-from engine.models.parameters import check_parameters, stack_columns
+from engine.arrays import Complexes, Floats, Ints
+from engine.models.parameters import check_parameters, stack_columns, take_rows
 from engine.models.variance_factor import FactorExponent, explosion_edges, factor_exponent
 from engine.protocols import ParameterSpec
 
@@ -63,6 +63,10 @@ class Heston:
     def stack(cls, models: Sequence[Self]) -> Self:
         """One object with columns of shape (rows, 1) out of ``rows`` objects with floats."""
         return cls(**stack_columns(models, [f.name for f in fields(cls)]))
+
+    def take(self, index: Ints) -> Self:
+        """Of a stacked object, the rows at ``index``: columns of shape (m, 1)."""
+        return type(self)(**take_rows(self, [f.name for f in fields(self)], index))
 
     def check(self) -> None:
         """Raise InputError naming the first parameter outside its range."""
@@ -124,11 +128,7 @@ class Heston:
 
     def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
         """``(p_lo, p_hi)`` by the closed explosion time, from inside; infinite where no moment explodes."""
-        edges = [
-            explosion_edges(kappa=self.kappa, sigma=self.sigma, rho=self.rho, tau=tau, upper=upper)
-            for upper in (False, True)
-        ]
-        return -edges[0], 1.0 + edges[1]
+        return explosion_edges(kappa=self.kappa, sigma=self.sigma, rho=self.rho, tau=tau)
 
     def mean_variance(self, tau: Floats | float) -> Floats:
         """``E[integral of v over tau] = theta tau + (v0 - theta) (1 - exp(-kappa tau)) / kappa``, both parts >= 0."""
@@ -137,3 +137,8 @@ class Heston:
         share = np.where(kt > 0.0, -np.expm1(-kt) / safe, 1.0)  # (1 - exp(-kt)) / kt
         late = np.where(kt < 1e-3, kt / 2.0 - kt * kt / 6.0 + kt**3 / 24.0, 1.0 - share)
         return np.asarray(self.v0 * tau * share + self.theta * tau * late)
+
+    def bend(self, tau: float) -> tuple[float, float]:
+        """``k_inf = -rho (v0 + kappa theta tau) / sigma``; ``phi`` is analytic off the imaginary axis (Lucic 2007)."""
+        v0, kappa, theta, sigma, rho = (float(np.reshape(getattr(self, f.name), -1)[0]) for f in fields(self))
+        return -rho * (v0 + kappa * theta * tau) / max(sigma, 1e-150), 0.5 * np.pi

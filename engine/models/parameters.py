@@ -6,10 +6,11 @@ from typing import Any, Sequence
 
 import numpy as np
 
+from engine.arrays import Ints
 from engine.errors import InputError
 from engine.protocols import ParameterSpec
 
-__all__ = ["check_parameters", "stack_columns"]
+__all__ = ["check_parameters", "stack_columns", "take_rows"]
 
 
 def check_parameters(model: Any, specs: Sequence[ParameterSpec], *, prefix: str = "model") -> None:
@@ -26,3 +27,8 @@ def stack_columns(models: Sequence[Any], names: Sequence[str]) -> dict[str, Any]
     """``{name: float64 column of shape (rows, 1)}`` for the given attributes of the models."""
     table = np.array([[getattr(m, name) for name in names] for m in models], dtype=np.float64)
     return {name: np.ascontiguousarray(table[:, i : i + 1]) for i, name in enumerate(names)}
+
+
+def take_rows(model: Any, names: Sequence[str], index: Ints) -> dict[str, Any]:
+    """``{name: column[index]}`` of a stacked model."""
+    return {name: getattr(model, name)[index] for name in names}

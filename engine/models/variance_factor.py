@@ -35,6 +35,8 @@ __all__ = ["FactorExponent", "explosion_edges", "factor_exponent"]
 
 _TINY = 1e-160  # stands in for D = 0, where S = tau exactly
 _SIGMA2_FLOOR = 1e-60
+_NEAREST, _FARTHEST = float(np.log(1e-9)), float(np.log(1e12))  # of an edge from 0 or 1, in the logarithm
+_MESH = 17
 _YOUNG = 0.5  # |D tau| under which the series of A is used: 14 terms leave 0.5^14 / 15! < 1e-16
 
 
@@ -137,67 +139,83 @@ def _young_variance(
     return a_part, size_a
 
 
-def explosion_edges(
-    *, kappa: Any, sigma: Any, rho: Any, tau: Any, upper: bool, start: float = 1e-9, stop: float = 1e12
-) -> Floats:
-    """Edge of the moment strip: the ``p`` whose explosion time equals ``tau``, approached from inside.
+def explosion_edges(*, kappa: Any, sigma: Any, rho: Any, tau: Any) -> tuple[Floats, Floats]:
+    """Edges ``(p_lo, p_hi)`` of the moment strip: where the explosion time equals ``tau``, approached from inside.
 
     Explosion time (Andersen and Piterbarg 2007, proposition 3.1, from memory), with ``chi = rho sigma p - kappa``,
     ``Delta = chi^2 - sigma^2 (p^2 - p)``: infinite if ``Delta >= 0`` and ``chi < 0``;
     ``2 atanh(sqrt(Delta)/chi)/sqrt(Delta)`` if ``Delta >= 0`` and ``chi > 0``; ``2 atan2(beta, chi)/beta`` with
-    ``beta = sqrt(-Delta)`` otherwise. Its reciprocal is continuous and monotone beyond [0, 1], so a bracketing
-    root search on it cannot fail; the inner end of the last bracket is returned (within 1e-13 relative), as the
-    distance of ``p`` from 1 (``upper``) or from 0 (lower edge). Beyond ``stop`` the edge counts as infinite.
+    ``beta = sqrt(-Delta)`` otherwise. Its reciprocal is continuous and monotone beyond [0, 1], so a bracketing root
+    search cannot fail; the inner end of the last bracket is returned (within 1e-13 relative of the distance from 0 or
+    1). The lower edge is the upper one under the share measure: ``p -> 1 - p``, ``kappa -> kappa - rho sigma``,
+    ``rho -> -rho``. Beyond 1e12 an edge counts as infinite.
     """
     kappa, sigma, rho, tau = np.broadcast_arrays(*np.atleast_1d(kappa, sigma, rho, tau))
+    shape = kappa.shape
+    sides = [
+        np.concatenate([np.ravel(a), np.ravel(b)])[:, None]
+        for a, b in ((kappa, kappa - rho * sigma), (sigma, sigma), (rho, -rho), (tau, tau))
+    ]
+    distance = _distance(*sides)
+    half = distance.shape[0] // 2
+    return -distance[half:].reshape(shape), 1.0 + distance[:half].reshape(shape)
+
+
+def _distance(kappa: Floats, sigma: Floats, rho: Floats, tau: Floats) -> Floats:
+    """Distance of the upper edge from 1, from below; columns in, vector out."""
     rate = 1.0 / tau
+    lo = np.full(tau.shape, _NEAREST)
+    width = _FARTHEST - _NEAREST
+    mesh = np.linspace(0.0, 1.0, _MESH)
+    at = np.arange(tau.shape[0])
+    f_lo = f_hi = np.zeros(0)
+    for round_ in range(2):  # two meshes narrow the bracket from 48 to 0.2 in the logarithm
+        t = lo + width * mesh
+        f = _explosion_rate(1.0 + np.exp(t), kappa, sigma, rho) - rate
+        inside = np.sum(f < 0.0, axis=1)
+        if round_ == 0:
+            infinite, none = inside == _MESH, inside == 0
+        cell = np.clip(inside - 1, 0, _MESH - 2)
+        lo = t[at, cell][:, None]
+        width = width / (_MESH - 1)
+        f_lo, f_hi = f[at, cell], f[at, cell + 1]
+    low = _narrow(lo[:, 0], lo[:, 0] + width, f_lo, f_hi, kappa[:, 0], sigma[:, 0], rho[:, 0], rate[:, 0])
+    edge = np.exp(low) * (1.0 - 4e-15)
+    return np.where(infinite, np.inf, np.where(none, np.exp(_NEAREST), edge))
 
-    def excess(t: Any) -> Any:
-        """``1/T* - 1/tau`` at distance ``exp(t)``: negative inside the strip."""
-        p = 1.0 + np.exp(t) if upper else -np.exp(t)
-        return _explosion_rate(p, kappa, sigma, rho) - rate
 
-    lo = np.full(tau.shape, np.log(start))
-    hi = np.full(tau.shape, np.log(stop))
-    f_hi = excess(hi)
-    infinite = f_hi <= 0.0
-    f_lo = excess(lo)
-    none = f_lo >= 0.0
-    with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-        _narrow(excess, lo, hi, f_lo, f_hi)
-    edge = np.exp(lo) * (1.0 - 1e-15)
-    edge = np.where(infinite, np.inf, edge)
-    return np.where(none, start, edge)
-
-
-def _narrow(excess: Any, lo: Floats, hi: Floats, f_lo: Floats, f_hi: Floats) -> None:
-    """Shrink the brackets in place: bisection while they are wide, then false position with the Illinois weight."""
-    side = np.zeros(lo.shape)
-    for step in range(80):
+def _narrow(
+    lo: Floats, hi: Floats, f_lo: Floats, f_hi: Floats, kappa: Floats, sigma: Floats, rho: Floats, rate: Floats
+) -> Floats:
+    """False position with the Illinois weight on brackets 0.2 wide; returns their inner ends."""
+    previous = np.zeros(lo.shape)
+    for _ in range(40):
         width = hi - lo
-        if np.all(width <= 2e-14 * np.maximum(1.0, np.abs(lo))):
-            return
-        secant = hi - f_hi * width / (f_hi - f_lo)
-        inside = (secant > lo) & (secant < hi) & (width < 0.7) & (step % 4 != 3)
-        mid = np.where(inside, np.clip(secant, lo + 1e-3 * width, hi - 1e-3 * width), lo + 0.5 * width)
-        mid = np.where(inside & (width < 1e-5), np.clip(secant + 2e-15, lo + 1e-14, hi - 1e-14), mid)
-        f = excess(mid)
-        low = f < 0.0
-        f_hi[...] = np.where(low, np.where(side < 0, 0.5 * f_hi, f_hi), f)
-        f_lo[...] = np.where(low, f, np.where(side > 0, 0.5 * f_lo, f_lo))
-        lo[...] = np.where(low, mid, lo)
-        hi[...] = np.where(low, hi, mid)
-        side = np.where(low, -1.0, 1.0)
+        if np.all(width <= 4e-14):
+            break
+        with np.errstate(divide="ignore", invalid="ignore"):
+            t = hi - f_hi * width / (f_hi - f_lo)
+        nudge = np.minimum(2e-14, 0.25 * width)  # a step past the root closes the bracket from the other side
+        t = np.where((t > lo) & (t < hi), t, lo + 0.5 * width)
+        t = np.where(width < 1e-4, np.where(previous < 0.0, t + nudge, t - nudge), t)
+        t = np.clip(t, lo + nudge, hi - nudge)
+        f = _explosion_rate(1.0 + np.exp(t), kappa, sigma, rho) - rate
+        inner = f < 0.0
+        f_hi = np.where(inner, np.where(previous < 0.0, 0.5 * f_hi, f_hi), f)
+        f_lo = np.where(inner, f, np.where(previous > 0.0, 0.5 * f_lo, f_lo))
+        lo, hi = np.where(inner, t, lo), np.where(inner, hi, t)
+        previous = np.where(inner, -1.0, 1.0)
+    return lo
 
 
 def _explosion_rate(p: Any, kappa: Any, sigma: Any, rho: Any) -> Any:
     """``1 / T*(p)``, zero where the moment never explodes."""
     chi = rho * sigma * p - kappa
-    delta = kappa * kappa + sigma * p * ((sigma - 2.0 * kappa * rho) - sigma * (1.0 - rho) * (1.0 + rho) * p)
+    delta = kappa * kappa + sigma * p * ((sigma - 2.0 * kappa * rho) - sigma * ((1.0 - rho) * (1.0 + rho)) * p)
     root = np.sqrt(np.abs(delta))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        real = 0.5 * root / np.arctanh(np.minimum(root / np.where(chi > 0, chi, 1.0), 1.0 - 1e-16))
-        curled = 0.5 * root / np.arctan2(root, chi)
-        level = np.where(delta < 0.0, curled, np.where(chi > 0.0, real, 0.0))
-        level = np.where((root == 0.0) & (chi > 0.0), 0.5 * chi, level)
-    return level
+        angle = np.arctan2(root, chi)
+        real = np.arctanh(np.minimum(root / np.maximum(chi, 1e-300), 1.0 - 1e-16))
+        level = 0.5 * root / np.where(delta < 0.0, angle, real)
+    level = np.where((delta >= 0.0) & (chi <= 0.0), 0.0, level)
+    return np.where((root == 0.0) & (chi > 0.0), 0.5 * chi, level)

@@ -1,0 +1,251 @@
+"""From a tolerance to rows: which exponents, which period, how many nodes. Nothing here is chosen by a user.
+
+A *row* is one contour ``z = u - i p`` of one slice and the strikes it serves. The plan picks, for a whole batch at once,
+
+1. one row at ``p = 1/2`` where every strike of a slice is worth more than rounding allows it to lose; otherwise rows
+   with ``p > 1`` for calls and ``p < 0`` for puts, the fewest for which no strike is more than ``loss`` units in the
+   exponent above its own saddle (``loss`` follows from tolerance / rounding);
+2. the period ``L`` of each row from Markov bounds on the aliases left after the closed-form correction, minimised over
+   moment orders in closed form;
+3. the end ``U`` of the sum from the model's proven envelope, and with it the nodes ``N = U L / (2 pi) + 1``, rounded up
+   to a ladder so that rows of many slices share an FFT length. Rows that would need more than ``PLAIN_LIMIT`` nodes
+   are left to the deformed contour (``nodes = 0``).
+
+Reference: R. Lord and C. Kahl, "Optimal Fourier inversion in semi-analytical option pricing", J. Comput. Finance 10(4),
+2007, for the saddle; the coverage rule and the closed-form period are ours.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from engine.arrays import Floats, Ints
+from engine.protocols import Model
+from engine.transform.moments import SideMoments, side_moments
+
+__all__ = ["Plan", "Strikes", "plan_rows"]
+
+EPS = float(np.finfo(np.float64).eps)
+PLAIN_LIMIT = 4096
+SHARE = 0.02  # of the tolerance, for each of aliasing and truncation: leaves room for a value estimate off by 10
+ROUNDING = 200.0  # rounding units a row is assumed to lose; the reported bound uses the sums themselves
+MOST_ROWS = 12  # per side
+_EASY = 0.6  # of the loss allowed: within it, cost decides
+_LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 9, 10, 11, 12, 14)}))
+_STEP = 1.3  # ratio of the search grid for U
+_STEPS = 52
+
+
+@dataclass(frozen=True, slots=True)
+class Strikes:
+    """Ragged strikes of a batch: ``k = ln(K/F)`` of shape (n,), ``slice_of`` (n,) non-decreasing, ``starts`` (S,)."""
+
+    k: Floats
+    slice_of: Ints
+    starts: Ints
+
+    @property
+    def side_of(self) -> Ints:
+        """Call sides are 0..S-1, put sides S..2S-1."""
+        return np.where(self.k >= 0.0, self.slice_of, self.slice_of + self.starts.shape[0])
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """Rows of a batch. Shapes: (R,) per row, (n,) for ``row_of``; ``moments`` per side."""
+
+    slice_of: Ints
+    exponent: Floats
+    period: Floats
+    nodes: Ints  # 0: deformed contour
+    log_target: Floats  # log of what each error piece may weigh, before the strike factor exp(-(p - 1) k)
+    k_low: Floats
+    k_high: Floats
+    row_of: Ints
+    moments: SideMoments
+
+
+def plan_rows(model: Model, tau: Floats, strikes: Strikes, *, tolerance: float, digital: bool) -> Plan:
+    """Plan a batch. ``model`` stacked over slices, ``tau`` (S, 1), relative ``tolerance`` of out-of-the-money values."""
+    count = strikes.starts.shape[0]
+    kr = np.abs(strikes.k)
+    farthest = np.maximum.reduceat(kr, strikes.starts)
+    moments = side_moments(model, tau, farthest)
+    call = strikes.k >= 0.0
+    far = np.concatenate([_reach(np.where(c, kr, -np.inf), strikes.starts) for c in (call, ~call)])
+    near = np.concatenate([-_reach(np.where(c, -kr, -np.inf), strikes.starts) for c in (call, ~call)])
+    used = far >= 0.0
+    sides = np.arange(2 * count)
+    log_far = np.where(used, moments.log_value(sides, np.where(used, far, 0.0)), np.inf)
+    floor = np.log(ROUNDING * EPS / tolerance)
+    single = np.minimum(log_far[:count], log_far[count:]) > floor
+    wing = used & ~np.concatenate([single, single])
+    side, grid, cuts = _cover(moments, sides[wing], near[wing], far[wing], tolerance)
+
+    # rows: first the single ones, then those of the wings; strikes find theirs by side and ordinal
+    single_slices = np.flatnonzero(single)
+    base = np.zeros(2 * count, dtype=np.int64)
+    base[single_slices] = np.arange(single_slices.shape[0])
+    base[single_slices + count] = np.arange(single_slices.shape[0])
+    order = np.argsort(side, kind="stable")
+    side, grid = side[order], grid[order]
+    first = np.searchsorted(side, sides[wing])
+    base[wing] = single_slices.shape[0] + first
+    ordinal = np.zeros(strikes.k.shape, dtype=np.int64)
+    side_of = strikes.side_of
+    if cuts.shape[1]:
+        ordinal = (kr[:, None] < cuts_by_side(cuts, sides[wing], 2 * count)[side_of]).sum(axis=1)
+    row_of = base[side_of] + ordinal
+    x = moments.x[side, grid]
+    exponent = np.concatenate([np.full(single_slices.shape, 0.5), np.where(side < count, 1.0 + x, -x)])
+    slice_of = np.concatenate([single_slices, side % count])
+
+    filled, row_of = np.unique(row_of, return_inverse=True)
+    exponent, slice_of = exponent[filled], slice_of[filled]
+    k_low = np.full(filled.shape, np.inf)
+    k_high = np.full(filled.shape, -np.inf)
+    np.minimum.at(k_low, row_of, strikes.k)
+    np.maximum.at(k_high, row_of, strikes.k)
+    smallest = _smallest_scaled(moments, slice_of, exponent, k_low, k_high, count)
+    log_target = smallest + np.log(tolerance * SHARE)
+    period = _period(moments, slice_of, exponent, k_low, k_high, log_target, smallest, tolerance, digital)
+    scale = np.sqrt(model.mean_variance(tau)).reshape(-1)[slice_of]
+    cut = _cutoff(model.take(slice_of), tau[slice_of], exponent, scale, log_target, digital)
+    with np.errstate(invalid="ignore", over="ignore"):
+        wanted = cut * period / (2.0 * np.pi) + 2.0
+    plain = wanted <= PLAIN_LIMIT
+    nodes = np.where(plain, _LADDER[np.searchsorted(_LADDER, np.where(plain, wanted, 1.0))], 0)
+    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, row_of, moments)
+
+
+def _reach(values: Floats, starts: Ints) -> Floats:
+    return np.asarray(np.maximum.reduceat(values, starts))
+
+
+def cuts_by_side(cuts: Floats, sides: Ints, count: int) -> Floats:
+    """Spread the cuts of the listed sides over all ``count`` sides; -inf where a side has none."""
+    out = np.full((count, cuts.shape[1]), -np.inf)
+    out[sides] = cuts
+    return out
+
+
+def _cover(
+    moments: SideMoments, sides: Ints, near: Floats, far: Floats, tolerance: float
+) -> tuple[Ints, Ints, Floats]:
+    """Cover [near, far] of each side with the fewest exponents, from the far end inwards.
+
+    Returns the side and grid point of every row, and the cuts (sides, most - 1): strikes below a cut belong to the
+    next row.
+    """
+    allowed = float(np.clip(np.log(tolerance / (ROUNDING * EPS)), 1.0, 9.0))
+    rows_side: list[Ints] = []
+    rows_grid: list[Ints] = []
+    cuts: list[Floats] = []
+    todo = np.arange(sides.shape[0])
+    far = far.copy()
+    for ordinal in range(MOST_ROWS):
+        if todo.size == 0:
+            break
+        side = sides[todo]
+        loss_far = moments.loss(side, far[todo])
+        worst = np.maximum(loss_far, moments.loss(side, near[todo]))
+        easy = worst <= _EASY * allowed  # the smallest exponent that will do: farthest from the edge of the strip
+        grid = np.where(easy.any(axis=1), np.argmax(easy, axis=1), np.argmin(worst, axis=1))
+        done = worst[np.arange(todo.size), grid] <= allowed
+        if ordinal == MOST_ROWS - 1:
+            done[:] = True
+        grid = np.where(done, grid, np.argmax(loss_far <= allowed, axis=1))
+        rows_side.append(side)
+        rows_grid.append(grid)
+        cut = np.full(sides.shape, -np.inf)
+        left = ~done
+        if np.any(left):
+            cut[todo[left]] = _lowest_covered(moments, side[left], grid[left], far[todo[left]], allowed)
+            cut[todo[left]] = np.maximum(cut[todo[left]], near[todo[left]])
+        cuts.append(cut)
+        todo = todo[left]
+        far[todo] = cut[todo]
+    if not rows_side:
+        return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64), np.zeros((0, 0))
+    return np.concatenate(rows_side), np.concatenate(rows_grid), np.stack(cuts, axis=1)
+
+
+def _lowest_covered(moments: SideMoments, side: Ints, grid: Ints, far: Floats, allowed: float) -> Floats:
+    """The smallest ``kr`` at which the row still loses no more than ``allowed``, on the saddle strikes of the grid."""
+    x, j0 = moments.x[side], moments.saddle[side]
+    strike = np.gradient(j0, axis=1) / np.gradient(x, axis=1)  # dJ0/dx: where x is the saddle
+    at = np.arange(side.shape[0])
+    xi, ji = x[at, grid][:, None], j0[at, grid][:, None]
+    loss = (ji - xi * strike) - (j0 - x * strike)
+    fits = (loss <= allowed) & (strike < far[:, None])
+    lowest = np.min(np.where(fits, strike, np.inf), axis=1)
+    return np.minimum(lowest, 0.9 * far)
+
+
+def _smallest_scaled(
+    moments: SideMoments, slice_of: Ints, exponent: Floats, k_low: Floats, k_high: Floats, count: int
+) -> Floats:
+    """``min over the row's strikes of log V(k) + (p - 1) k``, at the ends, where a log-concave function is least."""
+    ends = []
+    for k in (k_low, k_high):
+        put = k < 0.0
+        side = np.where(put, slice_of + count, slice_of)
+        log_value = moments.log_value(side, np.abs(k)) + np.where(put, k, 0.0)
+        ends.append(log_value + (exponent - 1.0) * k)
+    return np.minimum(ends[0], ends[1])
+
+
+def _period(
+    moments: SideMoments,
+    slice_of: Ints,
+    exponent: Floats,
+    k_low: Floats,
+    k_high: Floats,
+    log_target: Floats,
+    smallest: Floats,
+    tolerance: float,
+    digital: bool,
+) -> Floats:
+    """Smallest ``L`` for which some moment order bounds the aliases on either side by the target."""
+    count = moments.x.shape[0] // 2
+    p = exponent[:, None]
+    sides = []
+    for side, gap_sign, offset in ((slice_of, 1.0, -k_low), (slice_of + count, -1.0, k_high)):
+        x = moments.x[side]
+        gap = 1.0 + x - p if gap_sign > 0 else x + p
+        log_c = 0.0 if digital else moments.log_power[side]
+        room = log_c + moments.log_moment[side] - log_target[:, None]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            length = np.where(gap > 0.0, np.maximum(room, 1.0) / gap, np.inf) + offset[:, None]
+        sides.append(length.min(axis=1))
+    # the closed-form part of the aliases is subtracted: it must not exceed what rounding lets us subtract
+    x_own = np.where(exponent > 0.5, exponent - 1.0, -exponent)
+    k_far = np.where(exponent > 0.5, k_high, k_low)
+    log_value = smallest - (exponent - 1.0) * k_far
+    log_value = np.where(exponent < 0.0, log_value - k_far, log_value)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        exact = (np.log(0.25 * ROUNDING * EPS / tolerance) - log_value) / x_own
+    exact = np.where(exponent == 0.5, 0.0, exact)
+    return np.maximum(np.maximum(sides[0], sides[1]), np.maximum(exact, 0.0))
+
+
+def _cutoff(
+    model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, digital: bool
+) -> Floats:
+    """Smallest ``U`` (to a few per cent) beyond which the envelope weighs less than the target; inf if none is near."""
+    u = (3.0 / scale)[:, None] * _STEP ** np.arange(_STEPS)
+    level = model.log_envelope(exponent[:, None], u, tau)
+    if not digital:
+        level = level - np.log(u)
+    level = level - log_target[:, None]
+    above = np.sum(level > 0.0, axis=1)  # the envelope decreases
+    at = np.arange(above.shape[0])
+    hit = np.minimum(above, _STEPS - 1)
+    before = np.maximum(hit - 1, 0)
+    l0, l1 = level[at, before], level[at, hit]
+    share = np.clip(np.where(l0 > l1, l0 / np.where(l0 > l1, l0 - l1, 1.0), 1.0), 0.0, 1.0)
+    cut = u[at, before] + (u[at, hit] - u[at, before]) * np.minimum(1.0, share * 1.02 + 0.02)
+    cut = np.where(above == 0, u[:, 0], cut)
+    return np.where(above >= _STEPS, np.inf, cut)

@@ -1,0 +1,47 @@
+"""What a row hands back for its strikes, and the scaling that keeps it inside the double range."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from engine.arrays import Floats
+
+__all__ = ["EPS", "RowValues", "assemble"]
+
+EPS = float(np.finfo(np.float64).eps)
+_SMALLEST = float(np.finfo(np.float64).tiny)
+
+
+@dataclass(frozen=True, slots=True)
+class RowValues:
+    """``value``: the row's raw value per strike; ``bound``: a bound on its absolute error. Shape (n,)."""
+
+    value: Floats
+    bound: Floats
+
+
+def assemble(
+    *,
+    total: Floats,
+    log_scale: Floats,
+    rounding: Floats,
+    slope: Floats,
+    pieces: Floats,
+    k: Floats,
+    shifted: Floats,
+    aliases: Floats,
+) -> RowValues:
+    """Put the strike factor back: ``value = exp(log_scale + shifted) total - aliases`` with its bound.
+
+    ``total``: the sum in units of ``exp(log_scale)``; ``rounding``: its rounding error in the same units; ``slope``: the
+    change of ``total`` per unit of ``k``, which the rounding of ``k`` itself excites; ``pieces``: the discretisation and
+    truncation bound before the strike factor ``exp(shifted)``, ``shifted = (shift - p) k``.
+    """
+    scale = np.exp(log_scale + shifted)
+    value = scale * total - aliases
+    exponent_error = np.abs(log_scale) + np.abs(shifted) + 2.0
+    units = rounding + EPS * (exponent_error * np.abs(total) + np.abs(k) * slope)
+    bound = scale * units + np.exp(shifted) * pieces + EPS * (4.0 * np.abs(aliases) + np.abs(value)) + _SMALLEST
+    return RowValues(value, bound)
