@@ -1,0 +1,68 @@
+"""Wall-clock times by best of n: the smallest is the run least disturbed by the rest of the machine.
+
+Calls that are compared are timed in turn (a, b, a, b, ...), so that a machine that slows down in the middle slows all
+of them and the ratios stand.
+"""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from statistics import median
+
+__all__ = ["Stopwatch", "Timing"]
+
+Work = Callable[[], object]
+
+
+@dataclass(frozen=True, slots=True)
+class Timing:
+    """Seconds of one call: the best and the median of ``rounds`` rounds of ``calls`` calls each."""
+
+    best: float
+    median: float
+    rounds: int
+    calls: int
+
+
+@dataclass(frozen=True, slots=True)
+class Stopwatch:
+    """How long to look: ``rounds`` rounds, each repeated until it lasts ``shortest`` seconds. ``quick`` tells a
+    benchmark to choose small sizes too."""
+
+    rounds: int = 7
+    shortest: float = 0.02
+    quick: bool = False
+
+    @classmethod
+    def brief(cls) -> Stopwatch:
+        """One round of one call: only to see that a benchmark runs."""
+        return cls(rounds=1, shortest=0.0, quick=True)
+
+    def one(self, work: Work) -> Timing:
+        """Time one call."""
+        return self.together({"": work})[""]
+
+    def together(self, works: Mapping[str, Work]) -> dict[str, Timing]:
+        """Time several calls in turn, the same number of rounds each; every call is made once beforehand to warm up."""
+        calls = {name: self._calls(work) for name, work in works.items()}
+        seconds: dict[str, list[float]] = {name: [] for name in works}
+        for _ in range(self.rounds):
+            for name, work in works.items():
+                seconds[name].append(_round(work, calls[name]))
+        return {name: Timing(min(s), median(s), self.rounds, calls[name]) for name, s in seconds.items()}
+
+    def _calls(self, work: Work) -> int:
+        """Calls per round: enough for the round to outlast the clock's own grain."""
+        work()
+        once = _round(work, 1)
+        return max(1, math.ceil(self.shortest / max(once, 1e-9)))
+
+
+def _round(work: Work, calls: int) -> float:
+    begin = time.perf_counter()
+    for _ in range(calls):
+        work()
+    return (time.perf_counter() - begin) / calls
