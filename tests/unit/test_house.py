@@ -145,6 +145,21 @@ def test_numpy_starts_at_the_mapping_and_pydantic_stays_in_the_service() -> None
     assert faults == []
 
 
+def test_resources_do_not_import_each_other() -> None:
+    """A resource is a folder of the service with routes of its own."""
+    resources = {path.parent.name for path in sources("service") if path.name == "routes.py"}
+    faults = [
+        f"{path}: {name}"
+        for path, tree in _trees("service")
+        for name in _imported(tree)
+        if len(path.parts) > 2
+        and path.parts[1] in resources
+        and name.startswith("service.")
+        and name.split(".")[1] in resources - {path.parts[1]}
+    ]
+    assert faults == []
+
+
 def test_no_module_passes_the_size_stop() -> None:
     sizes = {str(p.relative_to(ROOT)): len(p.read_text(encoding="utf-8").splitlines()) for p in sources(*PACKAGES)}
     assert {name: size for name, size in sizes.items() if size > MODULE_STOP} == {}
