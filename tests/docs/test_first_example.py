@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
+import asyncio
 import json
 from fractions import Fraction
-from urllib.parse import urlsplit
 
-from starlette.testclient import TestClient
+import httpx
 
 from service.app import create_app
 from service.settings import Settings
@@ -14,8 +14,17 @@ from tests.docs.markdown import Request, code, marked, request, rows
 
 
 def _answer(sent: Request) -> dict[str, object]:
-    with TestClient(create_app(Settings())) as client:
-        got = client.request(sent.method, urlsplit(sent.url).path, headers=sent.headers, content=sent.body)
+    """Send the request to the app itself, started and stopped as a server would, without a socket."""
+
+    async def send() -> httpx.Response:
+        app = create_app(Settings())
+        async with (
+            app.router.lifespan_context(app),
+            httpx.AsyncClient(transport=httpx.ASGITransport(app=app)) as client,
+        ):
+            return await client.request(sent.method, sent.url, headers=sent.headers, content=sent.body)
+
+    got = asyncio.run(send())
     assert got.status_code == 200, got.text
     return dict(got.json())
 

@@ -24,7 +24,6 @@ LIBRARIES = (
     "scipy.special",
     "scipy.optimize",
     "fastapi",
-    "fastapi.testclient",
     "pydantic",
     "starlette",
     "uvicorn",
