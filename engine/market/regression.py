@@ -1,0 +1,154 @@
+"""Weighted linear regression that up to half of the observations cannot spoil, with a floor under its noise.
+
+Problem: ``values = design @ coefficients + noise``, ``noise_i`` of standard deviation ``deviations_i`` known beforehand,
+except that a minority of the observations are plainly wrong, perhaps all in the same direction (stale quotes are).
+
+1. If the weighted least-squares line passes every observation within ``cutoff`` deviations, nothing speaks
+   against any of them and that line is the answer.
+2. Otherwise start from a line with a high breakdown point: least trimmed squares over elemental subsets (exact lines
+   through one or two observations), the sum running over the ``n // 2 + 1`` smallest squared standardised residuals,
+   improved by concentration steps. Rousseeuw (1984), J. Amer. Statist. Assoc. 79:871-880; concentration steps by
+   Rousseeuw and Van Driessen (2006), Data Min. Knowl. Discov. 12:29-45 (both from memory).
+3. Then reweighted least squares: the start's scale is ``1.4826 (1 + 5 / (n - p)) median |r|``, observations beyond
+   ``cutoff`` scales are left out, line and scale are fitted again until the kept set stays the same. Rousseeuw and
+   Leroy (1987), Robust Regression and Outlier Detection, chapter 5, cutoff 2.5 (from memory).
+
+The scale multiplies ``deviations`` and is never taken below one: residuals may show that the noise is larger than was
+known beforehand, never that it is smaller, because errors shared by all observations leave no residual.
+The cutoff 2.5 fits bid-ask intervals exactly: an error uniform in an interval of width w has deviation w / sqrt(12), so the
+sum of two stays within (w1 + w2) / 2 <= sqrt(6) = 2.449 joint deviations (Cauchy-Schwarz). No observation whose
+interval contains the line is ever left out.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+from scipy.stats import norm
+
+from engine.arrays import Floats, Ints
+from engine.market.chain import Bools
+
+__all__ = ["CUTOFF", "RobustFit", "robust_fit"]
+
+CUTOFF: Final = 2.5  # Rousseeuw and Leroy (1987), from memory
+_CANDIDATES: Final = 1500  # elemental subsets tried; with 40 % bad observations a subset of two is good with odds 0.36
+_SEED: Final = 1984  # the subsets drawn from long chains are the same ones every time
+_STEPS: Final = 20  # concentration and reweighting steps; both settle in fewer than ten on every chain tried
+
+
+@dataclass(frozen=True, slots=True)
+class RobustFit:
+    """``coefficients`` (p,), their ``covariance`` (p, p), ``scale`` >= 1 in units of the deviations given,
+    ``kept`` (n,) observations the line rests on, ``decided`` false when too few observations disagree to tell which is wrong."""
+
+    coefficients: Floats
+    covariance: Floats
+    scale: float
+    kept: Bools
+    decided: bool
+
+
+def robust_fit(design: Floats, values: Floats, deviations: Floats, *, cutoff: float = CUTOFF) -> RobustFit:
+    """Fit ``values`` (n,) on ``design`` (n, p), p = 1 or 2, n >= p, of full rank, with positive ``deviations`` (n,).
+
+    Breakdown point one half from n = p + 2 on; with fewer observations none is left out and ``decided`` says whether
+    they agree. Deterministic.
+    """
+    count, width = design.shape
+    rows, target = design / deviations[:, None], values / deviations
+    everything = np.ones(count, dtype=np.bool_)
+    coefficients = _least_squares(rows, target, everything)
+    residuals = np.abs(target - rows @ coefficients)
+    agreed = bool(np.all(residuals <= cutoff))
+    if agreed or count < width + 2:
+        return _finish(rows, target, everything, 1.0, decided=agreed)
+    coefficients = _trimmed_start(rows, target)
+    residuals = np.abs(target - rows @ coefficients)
+    scale = 1.4826 * (1.0 + 5.0 / (count - width)) * float(np.median(residuals))
+    kept = residuals <= cutoff * max(scale, 1.0)
+    truncation = _truncated_deviation(cutoff)
+    for _ in range(_STEPS):
+        coefficients = _least_squares(rows, target, kept)
+        residuals = np.abs(target - rows @ coefficients)
+        scale = _residual_scale(residuals, kept, width) / truncation
+        again = residuals <= cutoff * max(scale, 1.0)
+        if np.array_equal(again, kept) or np.count_nonzero(again) < width + 1:
+            break
+        kept = again
+    return _finish(rows, target, kept, truncation, decided=True)
+
+
+def _finish(rows: Floats, target: Floats, kept: Bools, truncation: float, *, decided: bool) -> RobustFit:
+    coefficients = _least_squares(rows, target, kept)
+    residuals = np.abs(target - rows @ coefficients)
+    scale = max(1.0, _residual_scale(residuals, kept, rows.shape[1]) / truncation)
+    information = rows[kept].T @ rows[kept]
+    covariance = scale**2 * np.linalg.inv(information)
+    return RobustFit(coefficients, covariance, scale, kept, decided)
+
+
+def _least_squares(rows: Floats, target: Floats, kept: Bools) -> Floats:
+    return np.asarray(np.linalg.lstsq(rows[kept], target[kept], rcond=None)[0], dtype=np.float64)
+
+
+def _residual_scale(residuals: Floats, kept: Bools, width: int) -> float:
+    """Root of the squared residuals per degree of freedom; zero when there is none left."""
+    freedom = int(np.count_nonzero(kept)) - width
+    return float(np.sqrt(np.sum(residuals[kept] ** 2) / freedom)) if freedom > 0 else 0.0
+
+
+def _truncated_deviation(cutoff: float) -> float:
+    """Standard deviation of a standard normal cut off at +-``cutoff``: what the scale of kept residuals lacks."""
+    inside = 2.0 * float(norm.cdf(cutoff)) - 1.0
+    return float(np.sqrt(1.0 - 2.0 * cutoff * float(norm.pdf(cutoff)) / inside))
+
+
+def _trimmed_start(rows: Floats, target: Floats) -> Floats:
+    """Least trimmed squares: best elemental line, then concentration steps."""
+    count, width = rows.shape
+    half = count // 2 + 1
+    lines = _elemental_lines(rows, target)
+    squares = (target[None, :] - lines @ rows.T) ** 2
+    trimmed = np.partition(squares, half - 1, axis=1)[:, :half].sum(axis=1)
+    line = lines[int(np.argmin(trimmed))]
+    chosen = np.zeros(count, dtype=np.bool_)
+    for _ in range(_STEPS):
+        nearest = np.argsort(np.abs(target - rows @ line), kind="stable")[:half]
+        again = np.zeros(count, dtype=np.bool_)
+        again[nearest] = True
+        if np.array_equal(again, chosen):
+            break
+        chosen = again
+        if np.linalg.matrix_rank(rows[chosen]) < width:
+            break
+        line = _least_squares(rows, target, chosen)
+    return line
+
+
+def _elemental_lines(rows: Floats, target: Floats) -> Floats:
+    """Coefficients (m, p) of the lines through single observations (p = 1) or pairs of them (p = 2)."""
+    count, width = rows.shape
+    if width == 1:
+        through = rows[:, 0] != 0.0
+        return np.asarray(target[through] / rows[through, 0], dtype=np.float64)[:, None]
+    first, second = _index_pairs(count)
+    determinant = rows[first, 0] * rows[second, 1] - rows[first, 1] * rows[second, 0]
+    sound = determinant != 0.0
+    first, second, determinant = first[sound], second[sound], determinant[sound]
+    one = (target[first] * rows[second, 1] - rows[first, 1] * target[second]) / determinant
+    two = (rows[first, 0] * target[second] - target[first] * rows[second, 0]) / determinant
+    return np.column_stack([one, two])
+
+
+def _index_pairs(count: int) -> tuple[Ints, Ints]:
+    """All pairs when they are few, else a fixed draw of them."""
+    if count * (count - 1) // 2 <= _CANDIDATES:
+        first, second = np.triu_indices(count, k=1)
+        return first.astype(np.int64), second.astype(np.int64)
+    generator = np.random.default_rng(_SEED)
+    first = generator.integers(0, count, _CANDIDATES)
+    second = (first + generator.integers(1, count, _CANDIDATES)) % count
+    return first, second
