@@ -1,21 +1,21 @@
 """Moment generating functions of the models in multiple precision, written from the papers and apart from the engine.
 
-Everything here speaks ``M(w) = E[exp(w X)]`` with ``X = ln(S_T / F)`` and complex ``w`` (the engine's ``z`` is ``-i w``),
-on gmpy2 numbers. A model answers five questions:
+Everything here speaks ``M(w) = E[exp(w X)]`` with ``X = ln(S_T / F)`` and complex ``w`` (the engine's ``z`` is
+``-i w``), on gmpy2 numbers. A model answers five questions:
 
-- ``log_moment(w, near)``: ``log M(w)`` in the closed upper half plane; ``near`` is the state handed back by the previous
-  node of a path that starts on the real axis (``None`` on the axis itself), so that a complex logarithm is continued
-  along the path and never read off its principal branch;
+- ``log_moment(w, near)``: ``log M(w)`` in the closed upper half plane; ``near`` is the state handed back by the
+  previous node of a path that starts on the real axis (``None`` on the axis itself), so that a complex logarithm is
+  continued along the path and never read off its principal branch;
 - ``edges()``: the open interval of finite moments, to full precision;
 - ``slope()``: the ``s`` in ``log M(w) ~ s w`` as ``|w|`` grows in the upper half plane (``None``: Gaussian decay);
 - ``sector``: the open range of angles of ``w`` in which a contour may be bent;
 - ``extra_digits()``: decimal digits lost to cancellation inside the formulas.
 
-Heston's function is the cosh/sinh solution of its Riccati equation (Heston 1993, Rev. Financ. Stud. 6(2); the explosion
-time is the first zero of the same cosh/sinh combination, Andersen and Piterbarg 2007, Finance Stoch. 11). That zeros and
-branch points lie on the real ``w`` axis is Lucic (2007), "On singularities in the Heston model"; equation numbers are not
-given because the papers were not at hand: formulas from memory, checked against the Riccati equation itself and published
-prices in ``test_mp_prices_selfcheck.py``.
+Heston's function is the cosh/sinh solution of its Riccati equation (Heston 1993, Rev. Financ. Stud. 6(2); the
+explosion time is the first zero of the same cosh/sinh combination, Andersen and Piterbarg 2007, Finance Stoch. 11).
+That zeros and branch points lie on the real ``w`` axis is Lucic (2007), "On singularities in the Heston model";
+equation numbers are not given because the papers were not at hand: formulas from memory, checked against the Riccati
+equation itself and published prices in ``test_mp_prices_selfcheck.py``.
 """
 
 from __future__ import annotations
@@ -56,7 +56,7 @@ class Black:
     volatility: Any
     sector = STRAIGHT
 
-    def prepare(self, tau: Any) -> "_Gaussian":
+    def prepare(self, tau: Any) -> _Gaussian:
         return _Gaussian(mpfr(self.volatility) ** 2 * mpfr(tau))
 
 
@@ -92,9 +92,11 @@ class Heston:
     def extra_digits(self, tau: Any) -> int:
         if self.sigma == 0:
             return 0
-        scale = float(self.kappa) * float(self.theta) * float(tau) / float(self.sigma) ** 2
-        scale *= 1 + float(self.kappa)
-        return 4 + max(0, math.ceil(math.log10(scale + 1)))
+        kappa, theta, sigma, t = float(self.kappa), float(self.theta), float(self.sigma), float(tau)
+        level = kappa * theta / sigma**2 * (1 + kappa * t)  # of the absolute rounding error of the first term
+        spread = math.sqrt(float(self.mean_variance(tau))) or 1.0
+        turn = t * (kappa + sigma / spread)  # |D tau|: how much of 1 - exp(-D tau) survives
+        return 4 + math.ceil(math.log10(level + 1) + math.log10(1 + 1 / turn))
 
     def mean_variance(self, tau: Any) -> Any:
         """``E int_0^tau v dt``."""
@@ -223,7 +225,7 @@ class DoubleHeston:
 
 @dataclass(frozen=True)
 class Merton:
-    """Merton (1976): Gaussian log jumps of mean ``jump_mean`` and deviation ``jump_stdev`` at rate ``jump_intensity``."""
+    """Merton (1976): Gaussian log jumps, mean ``jump_mean``, deviation ``jump_stdev``, rate ``jump_intensity``."""
 
     volatility: Any
     jump_intensity: Any
@@ -313,7 +315,7 @@ class _Sum:
 
 @dataclass(frozen=True)
 class VarianceGamma:
-    """Madan, Carr and Chang (1998): Brownian motion with drift ``theta``, volatility ``sigma`` at a gamma time of rate ``nu``."""
+    """Madan, Carr and Chang (1998): Brownian motion of drift ``theta``, volatility ``sigma`` at a gamma time."""
 
     sigma: Any
     theta: Any
@@ -383,7 +385,7 @@ class _NormalInverseGaussianAt:
 
 @dataclass(frozen=True)
 class Kou:
-    """Kou (2002): double-exponential log jumps, up with probability ``up`` at rate ``rate_up``, down at ``rate_down``."""
+    """Kou (2002): double-exponential log jumps, up with probability ``up`` (``rate_up``), else down (``rate_down``)."""
 
     volatility: Any
     jump_intensity: Any

@@ -2,7 +2,8 @@
 
 - Black (1976) by the complementary error function;
 - Merton (1976, J. Financ. Econ. 3) by his Poisson series of Black prices;
-- Variance Gamma by its gamma mixture of Black prices (Madan, Carr and Chang 1998, European Finance Review 2, from memory);
+- Variance Gamma by its gamma mixture of Black prices (Madan, Carr and Chang 1998, European Finance Review 2, from
+  memory);
 - Heston's moment generating function by numerical integration of its Riccati equation.
 
 All values are undiscounted and per unit forward; ``k = ln(K/F)``.
@@ -62,7 +63,7 @@ def merton_otm_by_series(
 
 
 def variance_gamma_otm_by_mixture(k: Any, tau: Any, *, sigma: Any, theta: Any, nu: Any, call: bool) -> Any:
-    """Condition on the gamma time ``g`` of mean ``tau`` and variance ``nu tau``; ``x = log g`` tames the density at 0."""
+    """Condition on the gamma time ``g``, mean ``tau``, variance ``nu tau``; ``x = log g`` tames the density at 0."""
     tau, sigma, theta, nu = mpf(tau), mpf(sigma), mpf(theta), mpf(nu)
     shape = tau / nu
     drift = shape * mpmath.log(1 - theta * nu - sigma**2 * nu / 2)
@@ -83,7 +84,10 @@ def variance_gamma_otm_by_mixture(k: Any, tau: Any, *, sigma: Any, theta: Any, n
 def heston_log_moment_by_ode(
     w: Any, tau: Any, *, v0: Any, kappa: Any, theta: Any, sigma: Any, rho: Any, steps: int
 ) -> Any:
-    """``B' = (w^2 - w)/2 - (kappa - rho sigma w) B + sigma^2 B^2 / 2``, ``A' = kappa theta B``, by Gragg's extrapolated midpoint rule."""
+    """``B' = (w^2 - w)/2 - (kappa - rho sigma w) B + sigma^2 B^2 / 2``, ``A' = kappa theta B``.
+
+    Gragg's extrapolated midpoint rule, order 24, ``steps`` equal steps.
+    """
     w, tau = mpmath.mpmathify(w), mpf(tau)
     kappa, theta, sigma, rho = mpf(kappa), mpf(theta), mpf(sigma), mpf(rho)
     free, linear, square = (w * w - w) / 2, kappa - rho * sigma * w, sigma**2 / 2
