@@ -40,7 +40,8 @@ def near(value: Any, expected: Any, relative: str) -> bool:
 
 
 # A. Lewis, "Heston Model Reference Prices", 15 Feb 2019: 20 good digits were requested there, and 21 are what they
-# agree to; the printed digits from the 22nd on differ from 45-digit integration by two forms of the characteristic function.
+# agree to; the printed digits from the 22nd on differ from 45-digit integration by two forms of the characteristic
+# function.
 LEWIS = {
     80: ("26.774758743998854221382195325726949201687", "7.958878113256768285213263077598987193482"),
     90: ("20.933349000596710388139445766564068085476", "12.017966707346304987709573290236471654992"),
