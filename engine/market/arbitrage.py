@@ -94,7 +94,9 @@ def butterfly(side: Side, size: int) -> Bools:
     return _accuse_in_rounds(side, size, _butterfly_members)
 
 
-def calendar(sides: Sequence[Side], sizes: Sequence[int], *, expiries: Floats, scales: Floats, slacks: Floats) -> list[Bools]:
+def calendar(
+    sides: Sequence[Side], sizes: Sequence[int], *, expiries: Floats, scales: Floats, slacks: Floats
+) -> list[Bools]:
     """Rows accused of a calendar arbitrage, per expiry, among sides of one kind with normalised quotes.
 
     Each side's ladder is ``K / F`` (or ``-K / F``) and its quotes are divided by ``D F``. ``scales`` (m, 2) are the relative standard
@@ -111,7 +113,9 @@ def calendar(sides: Sequence[Side], sizes: Sequence[int], *, expiries: Floats, s
             for early, late in zip(ranks[:-distance], ranks[distance:], strict=True):
                 if expiries[early] < expiries[late]:
                     error = slacks[early] * scales[early] + slacks[late] * scales[late]
-                    found.append(_calendar_members(left[early], left[late], error, int(starts[early]), int(starts[late])))
+                    found.append(
+                        _calendar_members(left[early], left[late], error, int(starts[early]), int(starts[late]))
+                    )
         members = np.concatenate(found) if found else np.zeros((0, 3), dtype=np.int64)
         if not members.size:
             break

@@ -134,7 +134,10 @@ def _flag_calendar(
     years = np.array([expiries[i].expiry for i in known])
     errors = np.array(
         [
-            [fits[i].forward_uncertainty / fits[i].forward, fits[i].discount_factor_uncertainty / fits[i].discount_factor]
+            [
+                fits[i].forward_uncertainty / fits[i].forward,
+                fits[i].discount_factor_uncertainty / fits[i].discount_factor,
+            ]
             for i in known
         ]
     )

@@ -7,13 +7,18 @@ The first day counts, the last does not, so fractions over adjoining periods add
 
 from __future__ import annotations
 
+import re
 from calendar import isleap
 from collections.abc import Callable
 from datetime import date, datetime
+from typing import Final
 
 from engine.errors import InputError
 
 __all__ = ["DAY_COUNTS", "year_fraction"]
+
+_ISO_DATE: Final = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}")
+_ALLOWED: Final = "a date YYYY-MM-DD without a time of day"
 
 
 def _actual_365_fixed(start: date, end: date) -> float:
@@ -47,17 +52,26 @@ DAY_COUNTS: dict[str, Callable[[date, date], float]] = {
 }
 
 
-def year_fraction(start: date, end: date, day_count: str) -> float:
+def year_fraction(start: date | str, end: date | str, *, day_count: str = "ACT/365F") -> float:
     """Years from ``start`` to ``end`` under ``day_count``; negative when ``end`` is before ``start``.
 
-    ``day_count`` is one of ``DAY_COUNTS``, spelled exactly so. Accurate to two roundings. Raises InputError when the
-    name is unknown or an argument is not a calendar date (a date with a time of day has no day count: say which
-    date is meant).
+    Dates are ``datetime.date`` or ISO 8601 calendar dates ``"YYYY-MM-DD"``; ``day_count`` is one of ``DAY_COUNTS``,
+    spelled exactly so. Accurate to two roundings. Raises InputError when the name is unknown or an argument is not a
+    calendar date (a date with a time of day has no day count: say which date is meant).
     """
-    for name, value in (("start", start), ("end", end)):
-        if isinstance(value, datetime) or not isinstance(value, date):
-            raise InputError(name, "is not a calendar date", allowed="a date without a time of day")
+    first, last = _calendar_date("start", start), _calendar_date("end", end)
     rule = DAY_COUNTS.get(day_count)
     if rule is None:
         raise InputError("day_count", f"{day_count!r} is not known", allowed=", ".join(DAY_COUNTS))
-    return rule(start, end)
+    return rule(first, last)
+
+
+def _calendar_date(name: str, value: date | str) -> date:
+    if isinstance(value, str) and _ISO_DATE.fullmatch(value):
+        try:
+            return date.fromisoformat(value)
+        except ValueError:
+            raise InputError(name, f"{value} is not in the calendar", allowed=_ALLOWED) from None
+    if isinstance(value, datetime) or not isinstance(value, date):
+        raise InputError(name, "is not a calendar date", allowed=_ALLOWED)
+    return value

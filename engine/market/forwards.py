@@ -1,15 +1,15 @@
 """Forward and discount factor of one expiry from put-call parity over its strikes.
 
 Parity for European options: ``C - P = D (F - K)``. With the strikes counted from a centre ``K0`` it is the line
-``y_i = level - D (K_i - K0)`` through the differences of call and put midpoints, and ``F = K0 + level / D``. Given ``D``
-leaves the level alone (each pair says ``F = K + y / D``), given ``F`` the slope alone.
+``y_i = level - D (K_i - K0)`` through the differences of call and put midpoints, and ``F = K0 + level / D``. A given
+``D`` leaves the level alone (each pair says ``F = K + y / D``), a given ``F`` the slope alone.
 
-Noise. The fair value of a quote is somewhere in its bid-ask interval and nothing says where: uniform, so a midpoint has
-variance ``spread^2 / 12`` and a pair ``(call_spread^2 + put_spread^2) / 12``. These are the weights, and the floor under
-the noise: residuals can raise the standard errors above it, never lower them, since a market maker's lean common to
-all strikes moves the line and leaves no residual. Spreads below a quarter of the median one (locked quotes, mostly) count as
-that quarter, so that no pair is taken for exact (common practice, no source). How bad quotes are kept out of
-the fit: ``engine.market.regression``.
+Noise. The fair value of a quote is somewhere in its bid-ask interval and nothing says where: uniform, so a midpoint
+has variance ``spread^2 / 12`` and a pair ``(call_spread^2 + put_spread^2) / 12``. These are the weights, and the floor
+under the noise: residuals can raise the standard errors above it, never lower them, since a market maker's lean
+common to all strikes moves the line and leaves no residual. Spreads below a quarter of the median one (locked quotes,
+mostly) count as that quarter, so that no pair is taken for exact (common practice, no source). How bad quotes are kept
+out of the fit: ``engine.market.regression``.
 
 Standard errors: of ``D`` from the fit's covariance; of ``F = K0 + level / D`` by the delta method.
 
@@ -57,8 +57,9 @@ class ForwardStatus(IntEnum):
 class ForwardFit:
     """Forward and discount factor of one expiry, NaN where ``status`` says why; what was given is returned as given.
 
-    ``forward_error``, ``discount_factor_error``: one standard error, NaN for a given value or where there is no basis for one.
-    ``pairs`` strikes quoted two-sided on both sides, ``pairs_used`` of them in the fit. ``outliers`` (n,) pairs left out.
+    ``forward_error``, ``discount_factor_error``: one standard error, NaN for a given value or where there is no basis
+    for one. ``pairs`` strikes quoted two-sided on both sides, ``pairs_used`` of them in the fit. ``outliers`` (n,)
+    pairs left out.
     ``rms_residual``: root mean square of ``C - P - D (F - K)`` over the pairs used, price units, NaN without pairs.
     ``noise_scale`` >= 1: residual noise in units of what the spreads explain. ``line_errors`` (n,): standard
     error of ``D (F - K)`` at each strike, 0 for given values.
@@ -108,11 +109,13 @@ def infer_forward(chain: ChainExpiry, *, cutoff: float = CUTOFF) -> ForwardFit:
     """Forward and discount factor of ``chain``, those given kept, the rest by robust parity regression.
 
     ``cutoff``: standardised residual beyond which a pair is left out, see ``engine.market.regression``; at 2.5 or more
-    no pair whose executable interval [call bid - put ask, call ask - put bid] contains the line is left out. Robust to a minority
-    of bad pairs once there are four (three with one value given). Never raises.
+    no pair whose executable interval [call bid - put ask, call ask - put bid] contains the line is left out. Robust to
+    a minority of bad pairs once there are four (three with one value given). Never raises.
     """
     if not (math.isfinite(chain.expiry) and chain.expiry > 0.0):
-        return _nothing(chain, 0, ForwardStatus.EXPIRED, "expiry is not a positive number of years: nothing is inferred")
+        return _nothing(
+            chain, 0, ForwardStatus.EXPIRED, "expiry is not a positive number of years: nothing is inferred"
+        )
     pairs = _pairs(chain)
     if chain.forward is not None and chain.discount_factor is not None:
         return _given(chain, pairs, cutoff)
@@ -143,50 +146,67 @@ def _pairs(chain: ChainExpiry) -> _Pairs:
 
 
 def _fitted(chain: ChainExpiry, pairs: _Pairs, cutoff: float) -> ForwardFit:
-    weights = pairs.deviations**-2.0
-    centre = chain.forward if chain.forward is not None else float(np.average(pairs.strikes, weights=weights))
-    distances = pairs.strikes - centre
-    if chain.discount_factor is not None:
-        discount = chain.discount_factor
-        fit = robust_fit(
-            np.ones((distances.size, 1)), pairs.differences + discount * distances, pairs.deviations, cutoff=cutoff
-        )
-        level, gradient = float(fit.coefficients[0]), np.array([1.0 / discount])
-        slopes = np.ones((chain.size, 1))
-    elif chain.forward is not None:
-        fit = robust_fit(-distances[:, None], pairs.differences, pairs.deviations, cutoff=cutoff)
-        level, discount, gradient = 0.0, float(fit.coefficients[0]), np.array([0.0])
-        slopes = (centre - chain.strikes)[:, None]
-    else:
-        fit = robust_fit(
-            np.column_stack([np.ones_like(distances), -distances]), pairs.differences, pairs.deviations, cutoff=cutoff
-        )
-        level, discount = float(fit.coefficients[0]), float(fit.coefficients[1])
-        gradient = np.array([1.0 / discount, -level / discount**2]) if discount > 0.0 else np.zeros(2)
-        slopes = np.column_stack([np.ones(chain.size), centre - chain.strikes])
-    forward = centre + level / discount if discount > 0.0 else math.nan
+    line = _line(chain, pairs, cutoff)
+    forward, discount, fit = line.forward, line.discount_factor, line.fit
     if not (discount > 0.0 and forward > 0.0):
         reason = f"the parity line has discount factor {discount:.6g} and forward {forward:.6g}: not a market"
-        return _nothing(chain, int(distances.size), ForwardStatus.DEGENERATE, reason)
+        return _nothing(chain, int(pairs.rows.size), ForwardStatus.DEGENERATE, reason)
     residuals = pairs.differences - discount * (forward - pairs.strikes)
     outliers = np.zeros(chain.size, dtype=np.bool_)
     outliers[pairs.rows[~fit.kept]] = True
-    believable = pairs.spread_known or np.count_nonzero(fit.kept) > fit.coefficients.size
+    used = int(np.count_nonzero(fit.kept))
+    believable = pairs.spread_known or used > fit.coefficients.size
     out = ForwardFit(
         forward=forward,
         discount_factor=discount,
-        forward_error=_error(gradient @ fit.covariance @ gradient, chain.forward is None and believable),
-        discount_factor_error=_error(fit.covariance[-1, -1], chain.discount_factor is None and believable),
-        pairs=int(distances.size),
-        pairs_used=int(np.count_nonzero(fit.kept)),
+        forward_error=_error(
+            float(line.gradient @ fit.covariance @ line.gradient), chain.forward is None and believable
+        ),
+        discount_factor_error=_error(float(fit.covariance[-1, -1]), chain.discount_factor is None and believable),
+        pairs=int(pairs.rows.size),
+        pairs_used=used,
         rms_residual=float(np.sqrt(np.mean(residuals[fit.kept] ** 2))),
         noise_scale=fit.scale,
         outliers=outliers,
-        line_errors=np.sqrt(np.einsum("ni,ij,nj->n", slopes, fit.covariance, slopes)),
+        line_errors=np.sqrt(np.einsum("ni,ij,nj->n", line.slopes, fit.covariance, line.slopes)),
         status=ForwardStatus.FITTED,
         warnings=(),
     )
     return replace(out, warnings=_doubts(chain, out, fit, pairs))
+
+
+@dataclass(frozen=True, slots=True)
+class _Line:
+    """The parity line found: ``gradient`` (p,) of the forward and ``slopes`` (n, p) of ``D (F - K)`` at every strike of
+    the chain, both with respect to the coefficients of ``fit``."""
+
+    forward: float
+    discount_factor: float
+    fit: RobustFit
+    gradient: Floats
+    slopes: Floats
+
+
+def _line(chain: ChainExpiry, pairs: _Pairs, cutoff: float) -> _Line:
+    """One coefficient (level or discount factor) where the other value is given, both otherwise."""
+    values, deviations = pairs.differences, pairs.deviations
+    if chain.forward is not None:
+        fit = robust_fit((chain.forward - pairs.strikes)[:, None], values, deviations, cutoff=cutoff)
+        discount = float(fit.coefficients[0])
+        return _Line(chain.forward, discount, fit, np.zeros(1), (chain.forward - chain.strikes)[:, None])
+    centre = float(np.average(pairs.strikes, weights=deviations**-2.0))
+    distances = pairs.strikes - centre
+    ones = np.ones_like(distances)
+    if chain.discount_factor is not None:
+        discount = chain.discount_factor
+        fit = robust_fit(ones[:, None], values + discount * distances, deviations, cutoff=cutoff)
+        forward = centre + float(fit.coefficients[0]) / discount
+        return _Line(forward, discount, fit, np.array([1.0 / discount]), np.ones((chain.size, 1)))
+    fit = robust_fit(np.column_stack([ones, -distances]), values, deviations, cutoff=cutoff)
+    level, discount = float(fit.coefficients[0]), float(fit.coefficients[1])
+    forward = centre + level / discount if discount > 0.0 else math.nan
+    gradient = np.array([1.0 / discount, -level / discount**2]) if discount > 0.0 else np.zeros(2)
+    return _Line(forward, discount, fit, gradient, np.column_stack([np.ones(chain.size), centre - chain.strikes]))
 
 
 def _doubts(chain: ChainExpiry, out: ForwardFit, fit: RobustFit, pairs: _Pairs) -> tuple[str, ...]:
@@ -238,9 +258,7 @@ def _nothing(chain: ChainExpiry, count: int, status: ForwardStatus, reason: str)
     forward = math.nan if chain.forward is None else chain.forward
     discount = math.nan if chain.discount_factor is None else chain.discount_factor
     none, unknown = np.zeros(chain.size, dtype=np.bool_), np.full(chain.size, np.nan)
-    return ForwardFit(
-        forward, discount, math.nan, math.nan, count, 0, math.nan, 1.0, none, unknown, status, (reason,)
-    )
+    return ForwardFit(forward, discount, math.nan, math.nan, count, 0, math.nan, 1.0, none, unknown, status, (reason,))
 
 
 def _too_few(count: int, unknowns: int) -> str:
@@ -249,4 +267,4 @@ def _too_few(count: int, unknowns: int) -> str:
 
 
 def _error(variance: float, wanted: bool) -> float:
-    return math.sqrt(float(variance)) if wanted else math.nan
+    return math.sqrt(variance) if wanted else math.nan

@@ -1,7 +1,8 @@
 """Weighted linear regression that up to half of the observations cannot spoil, with a floor under its noise.
 
-Problem: ``values = design @ coefficients + noise``, ``noise_i`` of standard deviation ``deviations_i`` known beforehand,
-except that a minority of the observations are plainly wrong, perhaps all in the same direction (stale quotes are).
+Problem: ``values = design @ coefficients + noise``, ``noise_i`` of standard deviation ``deviations_i`` known
+beforehand, except that a minority of the observations are plainly wrong, perhaps all in the same direction (stale
+quotes are).
 
 1. If the weighted least-squares line passes every observation within ``cutoff`` deviations, nothing speaks
    against any of them and that line is the answer.
@@ -15,18 +16,18 @@ except that a minority of the observations are plainly wrong, perhaps all in the
 
 The scale multiplies ``deviations`` and is never taken below one: residuals may show that the noise is larger than was
 known beforehand, never that it is smaller, because errors shared by all observations leave no residual.
-The cutoff 2.5 fits bid-ask intervals exactly: an error uniform in an interval of width w has deviation w / sqrt(12), so the
-sum of two stays within (w1 + w2) / 2 <= sqrt(6) = 2.449 joint deviations (Cauchy-Schwarz). No observation whose
-interval contains the line is ever left out.
+The cutoff 2.5 fits bid-ask intervals exactly: an error uniform in an interval of width w has deviation w / sqrt(12),
+so the sum of two stays within (w1 + w2) / 2 <= sqrt(6) = 2.449 joint deviations (Cauchy-Schwarz). No observation
+whose interval contains the line is ever left out.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
-from scipy.stats import norm
 
 from engine.arrays import Floats, Ints
 from engine.market.chain import Bools
@@ -34,7 +35,9 @@ from engine.market.chain import Bools
 __all__ = ["CUTOFF", "RobustFit", "robust_fit"]
 
 CUTOFF: Final = 2.5  # Rousseeuw and Leroy (1987), from memory
-_CANDIDATES: Final = 1500  # elemental subsets tried; with 40 % bad observations a subset of two is good with odds 0.36
+_CANDIDATES: Final = 1500  # elemental subsets tried where there are more; all of them up to 55 observations
+_LEAST_CANDIDATES: Final = 200  # with 40 % bad observations a subset of two is good with odds 0.36: 0.64^200 = 1e-39
+_PRODUCTS: Final = 3_000_000  # residuals held at once while subsets are tried (24 MB); fewer subsets beyond
 _SEED: Final = 1984  # the subsets drawn from long chains are the same ones every time
 _STEPS: Final = 20  # concentration and reweighting steps; both settle in fewer than ten on every chain tried
 
@@ -42,7 +45,8 @@ _STEPS: Final = 20  # concentration and reweighting steps; both settle in fewer 
 @dataclass(frozen=True, slots=True)
 class RobustFit:
     """``coefficients`` (p,), their ``covariance`` (p, p), ``scale`` >= 1 in units of the deviations given,
-    ``kept`` (n,) observations the line rests on, ``decided`` false when too few observations disagree to tell which is wrong."""
+    ``kept`` (n,) observations the line rests on, ``decided`` false when too few observations disagree to tell which
+    is wrong."""
 
     coefficients: Floats
     covariance: Floats
@@ -69,13 +73,15 @@ def robust_fit(design: Floats, values: Floats, deviations: Floats, *, cutoff: fl
     residuals = np.abs(target - rows @ coefficients)
     scale = 1.4826 * (1.0 + 5.0 / (count - width)) * float(np.median(residuals))
     kept = residuals <= cutoff * max(scale, 1.0)
+    if not _full_rank(rows, kept):
+        return _finish(rows, target, everything, 1.0, decided=False)
     truncation = _truncated_deviation(cutoff)
     for _ in range(_STEPS):
         coefficients = _least_squares(rows, target, kept)
         residuals = np.abs(target - rows @ coefficients)
         scale = _residual_scale(residuals, kept, width) / truncation
         again = residuals <= cutoff * max(scale, 1.0)
-        if np.array_equal(again, kept) or np.count_nonzero(again) < width + 1:
+        if np.array_equal(again, kept) or not _full_rank(rows, again):
             break
         kept = again
     return _finish(rows, target, kept, truncation, decided=True)
@@ -86,8 +92,14 @@ def _finish(rows: Floats, target: Floats, kept: Bools, truncation: float, *, dec
     residuals = np.abs(target - rows @ coefficients)
     scale = max(1.0, _residual_scale(residuals, kept, rows.shape[1]) / truncation)
     information = rows[kept].T @ rows[kept]
-    covariance = scale**2 * np.linalg.inv(information)
+    covariance = np.asarray(scale**2 * np.linalg.inv(information), dtype=np.float64)
     return RobustFit(coefficients, covariance, scale, kept, decided)
+
+
+def _full_rank(rows: Floats, kept: Bools) -> bool:
+    """Whether the kept observations fix every coefficient and leave one over to judge them by."""
+    width = rows.shape[1]
+    return bool(np.count_nonzero(kept) > width and np.linalg.matrix_rank(rows[kept]) == width)
 
 
 def _least_squares(rows: Floats, target: Floats, kept: Bools) -> Floats:
@@ -102,8 +114,8 @@ def _residual_scale(residuals: Floats, kept: Bools, width: int) -> float:
 
 def _truncated_deviation(cutoff: float) -> float:
     """Standard deviation of a standard normal cut off at +-``cutoff``: what the scale of kept residuals lacks."""
-    inside = 2.0 * float(norm.cdf(cutoff)) - 1.0
-    return float(np.sqrt(1.0 - 2.0 * cutoff * float(norm.pdf(cutoff)) / inside))
+    density = math.exp(-0.5 * cutoff * cutoff) / math.sqrt(2.0 * math.pi)
+    return math.sqrt(1.0 - 2.0 * cutoff * density / math.erf(cutoff / math.sqrt(2.0)))
 
 
 def _trimmed_start(rows: Floats, target: Floats) -> Floats:
@@ -113,7 +125,7 @@ def _trimmed_start(rows: Floats, target: Floats) -> Floats:
     lines = _elemental_lines(rows, target)
     squares = (target[None, :] - lines @ rows.T) ** 2
     trimmed = np.partition(squares, half - 1, axis=1)[:, :half].sum(axis=1)
-    line = lines[int(np.argmin(trimmed))]
+    line: Floats = lines[int(np.argmin(trimmed))]
     chosen = np.zeros(count, dtype=np.bool_)
     for _ in range(_STEPS):
         nearest = np.argsort(np.abs(target - rows @ line), kind="stable")[:half]
@@ -122,7 +134,7 @@ def _trimmed_start(rows: Floats, target: Floats) -> Floats:
         if np.array_equal(again, chosen):
             break
         chosen = again
-        if np.linalg.matrix_rank(rows[chosen]) < width:
+        if int(np.linalg.matrix_rank(rows[chosen])) < width:
             break
         line = _least_squares(rows, target, chosen)
     return line
@@ -148,7 +160,8 @@ def _index_pairs(count: int) -> tuple[Ints, Ints]:
     if count * (count - 1) // 2 <= _CANDIDATES:
         first, second = np.triu_indices(count, k=1)
         return first.astype(np.int64), second.astype(np.int64)
+    draws = min(_CANDIDATES, max(_LEAST_CANDIDATES, _PRODUCTS // count))
     generator = np.random.default_rng(_SEED)
-    first = generator.integers(0, count, _CANDIDATES)
-    second = (first + generator.integers(1, count, _CANDIDATES)) % count
+    first = generator.integers(0, count, draws)
+    second = (first + generator.integers(1, count, draws)) % count
     return first, second
