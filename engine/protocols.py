@@ -12,7 +12,7 @@ from typing import ClassVar, Protocol, Self, Sequence
 
 from engine.arrays import Complexes, Floats, Ints
 
-__all__ = ["Model", "ParameterSpec"]
+__all__ = ["CfGradient", "Model", "ParameterSpec"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,6 +41,17 @@ class ParameterSpec:
         return low and high
 
 
+@dataclass(frozen=True, slots=True)
+class CfGradient:
+    """``log phi``, the cap on its rounding error in units of machine epsilon, its derivatives by every parameter and, last,
+    by ``tau`` (P + 1, ...), and the caps on theirs."""
+
+    log_value: Complexes
+    size: Floats
+    gradient: Complexes
+    gradient_size: Floats
+
+
 class Model(Protocol):
     """A published model of one underlying, as the transform sees it."""
 
@@ -48,6 +59,7 @@ class Model(Protocol):
     title: ClassVar[str]
     source: ClassVar[str]
     parameters: ClassVar[tuple[ParameterSpec, ...]]
+    sensitivity_names: ClassVar[tuple[str, ...]]
 
     @classmethod
     def stack(cls, models: Sequence[Self]) -> Self:
@@ -73,8 +85,8 @@ class Model(Protocol):
         """``log_cf`` and the cap on its absolute rounding error, in units of machine epsilon, in one evaluation."""
         ...
 
-    def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
-        """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
+    def log_cf_gradient(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> CfGradient:
+        """``log_cf_sized`` with the derivatives by the parameters, in the order of ``sensitivity_names``, and by ``tau``."""
         ...
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:

@@ -57,10 +57,6 @@ class Black:
         value = self.log_cf(z, tau)
         return value, 4.0 * np.abs(value)
 
-    def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
-        """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
-        return 4.0 * np.abs(self.log_cf(z, tau))
-
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)] = s^2 p (p - 1) / 2``."""
         return np.asarray(0.5 * self.mean_variance(tau) * (p * (p - 1.0)))

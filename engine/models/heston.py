@@ -72,19 +72,18 @@ class Heston:
         """Raise InputError naming the first parameter outside its range."""
         check_parameters(self, self.parameters)
 
-    def _exponent(self, w: Any, tau: Any, along_path: bool) -> FactorExponent:
-        d2 = self.kappa * self.kappa + w * (
-            self.sigma * (self.sigma - 2.0 * self.kappa * self.rho) - self.sigma**2 * self._rho_gap * w
-        )
+    def _exponent(self, w: Any, tau: Any, along_path: bool, sized: bool) -> FactorExponent:
+        linear = self.sigma * (self.sigma - 2.0 * self.kappa * self.rho)
         return factor_exponent(
             w * (w - 1.0),
-            self.kappa - self.rho * self.sigma * w,
-            d2,
+            self.kappa - (self.rho * self.sigma) * w,
+            self.kappa * self.kappa + w * (linear - (self.sigma * self.sigma * self._rho_gap) * w),
             v0=self.v0,
             kappa_theta=self.kappa * self.theta,
             sigma=self.sigma,
             tau=tau,
             along_path=along_path,
+            sized=sized,
         )
 
     @property
@@ -93,22 +92,18 @@ class Heston:
 
     def log_cf(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> Complexes:
         """``log E[exp(i z X)]``, shape of ``z`` broadcast with the parameters. ``tau`` in years, > 0."""
-        return self._exponent(1j * z, tau, along_path).log_value
+        return self._exponent(1j * z, tau, along_path, False).log_value
 
     def log_cf_sized(
         self, z: Complexes, tau: Floats | float, *, along_path: bool = False
     ) -> tuple[Complexes, Floats]:
         """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
-        exponent = self._exponent(1j * z, tau, along_path)
-        return exponent.log_value, 4.0 * exponent.size
-
-    def log_cf_rounding(self, z: Complexes, tau: Floats | float) -> Floats:
-        """A cap on the absolute rounding error of ``log_cf``, in units of machine epsilon."""
-        return 4.0 * self._exponent(1j * z, tau, False).size
+        exponent = self._exponent(1j * z, tau, along_path, True)
+        return exponent.log_value, 4.0 * np.asarray(exponent.size)
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)]`` for real ``p`` inside the strip."""
-        return np.asarray(self._exponent(p + 0j, tau, False).log_value.real)
+        return np.asarray(self._exponent(p + 0j, tau, False, False).log_value.real)
 
     def log_envelope(self, p: Floats, u: Floats, tau: Floats | float) -> Floats:
         """Proven majorant of ``log |phi(u - i p)|``, non-increasing in ``u >= 0`` (module docstring)."""
@@ -116,7 +111,7 @@ class Heston:
         q = p * (p - 1.0) - self._rho_gap * u * u
         d2 = b * b - self.sigma**2 * q
         exponent = factor_exponent(
-            q,
+            q + 0j,
             b + 0j,
             d2 + 0j,
             v0=self.v0,

@@ -33,6 +33,7 @@ from engine.arrays import Complexes, Floats
 
 __all__ = ["FactorExponent", "explosion_edges", "factor_exponent"]
 
+_FAR = 0.7  # Re D tau above which 1 - exp(-D tau) loses less than a unit of rounding by itself
 _TINY = 1e-160  # stands in for D = 0, where S = tau exactly
 _SIGMA2_FLOOR = 1e-60
 _NEAREST, _FARTHEST = float(np.log(1e-9)), float(np.log(1e12))  # of an edge from 0 or 1, in the logarithm
@@ -42,10 +43,11 @@ _YOUNG = 0.5  # |D tau| under which the series of A is used: 14 terms leave 0.5^
 
 @dataclass(frozen=True, slots=True)
 class FactorExponent:
-    """``log_value``: the exponent; ``size``: sum of the moduli of its parts, the scale of its rounding error."""
+    """``log_value``: the exponent; ``size``: sum of the moduli of its parts, the scale of its rounding error (None
+    unless asked for)."""
 
     log_value: Complexes
-    size: Floats
+    size: Floats | None
 
 
 def factor_exponent(
@@ -58,61 +60,79 @@ def factor_exponent(
     sigma: Any,
     tau: Any,
     along_path: bool = False,
+    sized: bool = False,
 ) -> FactorExponent:
-    """``kappa theta A + v0 B`` for arrays ``q``, ``b``, ``d2`` that broadcast with the parameters.
+    """``kappa theta A + v0 B`` for complex arrays ``q``, ``b``, ``d2`` that broadcast with the parameters.
 
     Units: ``tau`` in years, variances per year. Accuracy: a few units of rounding times ``size``.
     """
     sigma2 = sigma * sigma
     d = np.sqrt(d2)
-    d = np.where(d == 0.0, _TINY, d)
-    one_minus_e, e = _one_minus_exp(d * tau)
+    if not d.all():
+        d = np.where(d == 0.0, _TINY, d)
+    dt = d * tau
+    one_minus_e = _one_minus_exp(dt)
     s = one_minus_e / d
-    negative = np.real(b) < 0.0
-    if np.any(negative):
-        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            r = np.where(negative, (b - d) / np.maximum(sigma2, _SIGMA2_FLOOR), q / np.where(negative, 1.0, b + d))
-    else:
-        r = q / (b + d)
-    y = 0.5 * s * r
-    x = sigma2 * y
-    log_half = _log1p(x, along_path)
-    b_part = v0 * (q * s) / (2.0 + 2.0 * x)
+    r = _small_root(q, b, d, sigma2)
+    x = s * r * (0.5 * sigma2)
+    b_part = (q * v0) * s / (2.0 + 2.0 * x)
     drift = r * tau
-    ratio = 2.0 * log_half / np.maximum(sigma2, _SIGMA2_FLOOR)
-    ratio = np.where(sigma2 > _SIGMA2_FLOOR, ratio, 2.0 * y)
-    a_part = drift - ratio
-    size_a = kappa_theta * np.abs(drift)
+    a_part = drift - _log_ratio(x, s * r, sigma2, along_path)
+    size_a = kappa_theta * np.abs(drift) if sized else None
     if np.any(kappa_theta * tau > 16.0 * v0):
         a_part, size_a = _young_variance(a_part, size_a, d=d, r=r, x=x, s=s, tau=tau, sigma2=sigma2, kt=kappa_theta)
     log_value = kappa_theta * a_part + b_part
-    size = 2.0 * size_a + np.abs(b_part) * (2.0 + np.abs(d * tau) * np.abs(e))
+    if size_a is None:
+        return FactorExponent(log_value, None)
+    size = 2.0 * size_a + np.abs(b_part) * (2.0 + np.abs(dt) * np.exp(-dt.real))
     return FactorExponent(log_value, size)
 
 
-def _one_minus_exp(dt: Any) -> tuple[Any, Any]:
-    """``1 - exp(-dt)`` and ``exp(-dt)`` for ``Re dt >= 0`` with relative accuracy down to ``dt -> 0``."""
+def _one_minus_exp(dt: Any) -> Any:
+    """``1 - exp(-dt)`` for ``Re dt >= 0``, to relative accuracy however small ``dt``."""
+    if dt.real.min(initial=np.inf) > _FAR:
+        return 1.0 - np.exp(-dt)
     decay = np.expm1(-dt.real)
     half = 0.5 * dt.imag
     sine = np.sin(half)
-    scale = 1.0 + decay
-    real = -decay + scale * (2.0 * sine * sine)
-    imag = scale * (2.0 * sine * np.cos(half))
-    one_minus = real + 1j * imag
-    return one_minus, 1.0 - one_minus
+    twice = (2.0 + 2.0 * decay) * sine
+    out = np.empty_like(dt)
+    out.real = twice * sine - decay
+    out.imag = twice * np.cos(half)
+    return out
+
+
+def _small_root(q: Any, b: Any, d: Any, sigma2: Any) -> Any:
+    """``r = q / (b + D) = (b - D) / sigma^2``, whichever adds numbers of one sign."""
+    negative = b.real < 0.0
+    if not negative.any():
+        return q / (b + d)
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        return np.where(negative, (b - d) / np.maximum(sigma2, _SIGMA2_FLOOR), q / np.where(negative, 1.0, b + d))
+
+
+def _log_ratio(x: Any, twice_y: Any, sigma2: Any, along_path: bool) -> Any:
+    """``2 log1p(x) / sigma^2`` with ``x = sigma^2 y``, which tends to ``2 y``."""
+    log = _log1p(x, along_path)
+    if np.min(sigma2) > _SIGMA2_FLOOR:
+        return log * (2.0 / sigma2)
+    return np.where(sigma2 > _SIGMA2_FLOOR, log * (2.0 / np.maximum(sigma2, _SIGMA2_FLOOR)), twice_y)
 
 
 def _log1p(x: Any, along_path: bool) -> Any:
     """Complex ``log(1 + x)`` with relative accuracy as ``x -> 0``; continued along the last axis on request."""
     re, im = x.real, x.imag
     inner = re * (2.0 + re) + im * im
-    near = inner > -0.75
-    with np.errstate(divide="ignore", invalid="ignore"):
-        real = np.where(near, 0.5 * np.log1p(np.where(near, inner, 0.0)), np.log(np.hypot(1.0 + re, im)))
+    out = np.empty_like(x)
+    if inner.min(initial=0.0) > -0.75:
+        out.real = 0.5 * np.log1p(inner)
+    else:
+        near = inner > -0.75
+        with np.errstate(divide="ignore"):
+            out.real = np.where(near, 0.5 * np.log1p(np.where(near, inner, 0.0)), np.log(np.hypot(1.0 + re, im)))
     angle = np.arctan2(im, 1.0 + re)
-    if along_path:
-        angle = np.unwrap(angle, axis=-1)
-    return real + 1j * angle
+    out.imag = np.unwrap(angle, axis=-1) if along_path else angle
+    return out
 
 
 def _young_variance(
@@ -135,7 +155,8 @@ def _young_variance(
     second = s * r * xs * quad  # 2 x / sigma^2 = S r
     series = first + second
     a_part = np.where(small, series, a_part)
-    size_a = np.where(small, kt * (np.abs(first) + np.abs(second)), size_a)
+    if size_a is not None:
+        size_a = np.where(small, kt * (np.abs(first) + np.abs(second)), size_a)
     return a_part, size_a
 
 

@@ -10,8 +10,8 @@ bent down (``w < 0``) for strikes above ``k_inf``, up for those below, where ``p
 Trapezoidal rule with step ``h``; its error for a function analytic in ``|Im y| < d`` is at most
 ``(H+ + H-) / (exp(2 pi d / h) - 1)`` with ``H+-`` the integrals of the modulus along ``Im y = +-d`` (Trefethen and Weideman
 2014, theorem 5.1). ``H+-`` are themselves computed by quadrature and doubled; the tail beyond the last node is the
-integral of the modulus over it, doubled: conservative rather than proven, and said so. Moduli are log-convex in
-``k``, so their largest value over a row's strikes is taken at its two ends.
+geometric continuation of its last terms, doubled: conservative rather than proven, and said so. Moduli are log-convex
+in ``k``, so their largest value over a row's strikes is taken at its two ends.
 
 Source: S. Boyarchenko and S. Levendorskii, "Sinh-acceleration: efficient evaluation of probability distributions,
 option pricing, and Monte Carlo simulations", IJTAF 22(3), 2019; V. Lucic, "On singularities in the Heston model", 2007
@@ -25,186 +25,189 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Floats, Ints
+from engine.arrays import Complexes, Floats
 from engine.protocols import Model
-from engine.transform.contours import Contours
+from engine.transform.bounds import moduli
 from engine.transform.kernels import Kernel
-from engine.transform.record import EPS, RowValues, assemble
+from engine.transform.plan import Plan
+from engine.transform.record import EPS
 
-__all__ = ["DeformedValues", "deformed_row"]
+__all__ = ["BentSum", "bent_sums"]
 
-_PROBE_STEP = 0.2
-_PROBE = _PROBE_STEP * np.arange(221)  # |z| up to exp(44) b
+_PROBE_STEP = 0.4
+_SHORT, _LONG = 16.0, 44.0  # |z| up to exp of it times b
 _CANDIDATES = ((0.8, 0.9), (0.8, 0.6), (0.55, 0.85), (0.55, 0.5), (0.3, 0.8), (0.3, 0.4))  # (share of angle, of gap)
 _MOST_NODES = 2000
 _STRIKE_BLOCK = 256
 
 
 @dataclass(frozen=True, slots=True)
+class BentSum:
+    """One bent contour, for the strikes on one side of ``k_inf``: arguments ``i z`` (N,), terms ``psi`` (K, N) in units of
+    ``exp(log_scale)``, and per kernel (K,) what a bound needs."""
+
+    k_inf: float
+    down: bool
+    iz: Complexes
+    psi: Complexes
+    log_scale: float
+    rounding: Floats
+    slope: Floats
+    pieces: Floats
+
+    def serves(self, k: Floats) -> Any:
+        """Which of the strikes are its own."""
+        return (k >= self.k_inf) == self.down
+
+    def totals(self, k: Floats, p: float) -> Floats:
+        """The sums of every kernel at ``k`` (n,): shape (K, n)."""
+        out = np.empty((self.psi.shape[0], k.shape[0]))
+        for start in range(0, k.shape[0], _STRIKE_BLOCK):
+            part = slice(start, start + _STRIKE_BLOCK)
+            out[:, part] = (np.exp(np.multiply.outer(k[part], p - self.iz)) @ self.psi.T).real.T
+        return out
+
+
+@dataclass(frozen=True, slots=True)
 class _Bend:
-    """One trial contour: its shape, the step it needs and where it may stop."""
+    """A trial contour: its shape, the step it needs and where it may stop."""
 
     w1: float
     b: float
     w: float
     d: float
-    hardy: float  # H+ + H- over pi, scaled by exp(-log M(p)) and the strike factor
+    hardy: Floats  # (H+ + H-) / pi per kernel, before the strike factor
+    worst: float  # the largest of them, every kernel scaled to the vanilla at y = 0
     stop: float
-    cost: float
 
 
-@dataclass(frozen=True, slots=True)
-class DeformedValues:
-    """Values per kernel, and the nodes used."""
-
-    values: list[RowValues]
-    nodes: int
-
-
-def deformed_row(
-    model: Model, tau: float, contours: Contours, at: int, kernels: list[Kernel], *, k: Floats
-) -> DeformedValues:
-    """Values at strikes ``k`` (n,) of row ``at``. ``model`` holds that row's parameters alone, as floats or (1, 1)."""
-    p = float(contours.exponent[at])
+def bent_sums(model: Model, tau: float, plan: Plan, row: int, kernels: list[Kernel]) -> list[BentSum]:
+    """The contours of one row, at most two. ``model`` holds that row's parameters alone, as floats or (1, 1)."""
     k_inf, limit = model.bend(tau)
-    down = k >= k_inf
-    value = [np.empty(k.shape) for _ in kernels]
-    bound = [np.empty(k.shape) for _ in kernels]
-    nodes = 0
-    for part, sign in ((down, -1.0), (~down, 1.0)):
-        if not np.any(part):
-            continue
-        side = k[part]
-        target = float(contours.log_target[at])
-        bend = _choose(model, tau, contours, at, kernels, sign, limit, float(side.min()), float(side.max()), target)
-        rows, used = _sum(model, tau, p, bend, kernels, side, target)
-        nodes += used
-        for i, r in enumerate(rows):
-            value[i][part] = r.value
-            bound[i][part] = r.bound
-    return DeformedValues([RowValues(v, e) for v, e in zip(value, bound, strict=True)], nodes)
+    low, high = float(plan.k_low[row]), float(plan.k_high[row])
+    out = []
+    if high >= k_inf:
+        out.append(_bent_sum(model, tau, plan, row, kernels, (-1.0, limit, k_inf), (max(low, k_inf), high)))
+    if low < k_inf:
+        out.append(_bent_sum(model, tau, plan, row, kernels, (1.0, limit, k_inf), (low, min(high, k_inf))))
+    return out
 
 
-def _line(bend_w1: float, b: float, angle: float, y: Floats) -> tuple[Any, Any]:
+def _line(w1: Any, b: Any, angle: Any, y: Floats) -> tuple[Any, Any]:
     """``z`` and ``dz/dy`` on the line ``Im y`` that turns the angle into ``angle``."""
     arg = y + 1j * angle
-    return 1j * bend_w1 + b * np.sinh(arg), b * np.cosh(arg)
-
-
-def _log_modulus(
-    model: Model, tau: float, kernels: list[Kernel], z: Any, dz: Any, p: float, k_low: float, k_high: float
-) -> Floats:
-    """Log of the largest integrand modulus over kernels and row ends, the strike factor ``exp((shift-p)k)`` apart."""
-    iz = 1j * z
-    with np.errstate(over="ignore", invalid="ignore"):
-        log_phi = model.log_cf(z[None, :], tau, along_path=True)[0].real
-    lift = z.imag + p
-    factor = np.max([np.abs(kernel.factor(iz)) for kernel in kernels], axis=0)
-    level = log_phi + np.maximum(lift * k_low, lift * k_high) + np.log(factor * np.abs(dz))
-    return np.where(np.isnan(level), np.inf, level)
+    return 1j * w1 + b * np.sinh(arg), b * np.cosh(arg)
 
 
 def _choose(
     model: Model,
     tau: float,
-    contours: Contours,
-    at: int,
+    plan: Plan,
+    row: int,
     kernels: list[Kernel],
-    sign: float,
-    limit: float,
-    k_low: float,
-    k_high: float,
-    target: float,
+    sector: tuple[float, float],
+    span: tuple[float, float],
+    length: float,
 ) -> _Bend:
     """The cheapest of a few bends: by the step its analyticity allows and the length its decay needs."""
-    p = float(contours.exponent[at])
-    lower, upper = _gap(contours, at)
-    best: _Bend | None = None
-    for share, fill in _CANDIDATES:
-        w = sign * 0.5 * share * limit
-        d = 0.47 * share * limit
-        up = np.sin(w + d) - np.sin(w)
-        down = np.sin(w) - np.sin(w - d)
-        b = fill * min((p - lower) / up, (upper - p) / down)
-        w1 = -p - b * np.sin(w)
-        hardy = 0.0
-        for angle in (w + d, w - d):
-            z, dz = _line(w1, b, angle, _PROBE)
-            level = _log_modulus(model, tau, kernels, z, dz, p, k_low, k_high)
-            with np.errstate(over="ignore"):
-                hardy += 2.0 * _PROBE_STEP * float(np.sum(np.exp(level))) / np.pi
-        z, dz = _line(w1, b, w, _PROBE)
-        level = _log_modulus(model, tau, kernels, z, dz, p, k_low, k_high)
-        with np.errstate(over="ignore"):
-            weight = np.exp(level) * (2.0 * _PROBE_STEP / np.pi)
-        tail = np.cumsum(weight[::-1])[::-1]
-        small = np.flatnonzero(tail <= np.exp(target))
-        stop = float(_PROBE[small[0]]) if small.size else float(_PROBE[-1])
-        decades = np.log(hardy) - target if np.isfinite(hardy) else np.inf
-        cost = stop * max(decades, 1.0) / d
-        if best is None or cost < best.cost:
-            best = _Bend(w1, b, w, d, hardy, stop, cost)
-    assert best is not None
-    return best
+    sign, limit = sector
+    p = float(plan.exponent[row])
+    target = float(plan.log_target[row])
+    lower, upper = _gap(plan, row)
+    share, fill = np.array(_CANDIDATES).T
+    w = sign * 0.5 * share * limit
+    d = 0.47 * share * limit
+    b = fill * np.minimum((p - lower) / (np.sin(w + d) - np.sin(w)), (upper - p) / (np.sin(w) - np.sin(w - d)))
+    w1 = -p - b * np.sin(w)
+    angle = np.concatenate([w, w + d, w - d])[:, None]
+    probe = np.arange(0.0, length + 0.5 * _PROBE_STEP, _PROBE_STEP)
+    z, dz = _line(np.tile(w1, 3)[:, None], np.tile(b, 3)[:, None], angle, probe)
+    with np.errstate(over="ignore", invalid="ignore", divide="ignore", under="ignore"):
+        level = np.log(moduli(model, z, np.full((1, 1), tau), kernels, along_path=True)) + np.log(np.abs(dz))
+        lift = z.imag + p
+        level += np.maximum(lift * span[0], lift * span[1])
+        level[np.isnan(level)] = np.inf
+        weight = np.exp(level) * (2.0 * _PROBE_STEP / np.pi)
+    weight = weight.reshape(len(kernels), 3, len(_CANDIDATES), probe.shape[0])
+    start = weight[:, 0, :, :1]
+    unit = np.where(start > 0.0, start[:1] / np.where(start > 0.0, start, 1.0), 1.0)
+    hardy = weight[:, 1:].sum(axis=(1, 3))
+    with np.errstate(invalid="ignore", over="ignore"):
+        tail = np.max(np.cumsum((weight[:, 0] * unit)[..., ::-1], axis=-1)[..., ::-1], axis=0)
+        worst = np.max(hardy * unit[..., 0], axis=0)
+        small = tail <= np.exp(target)
+        stop = np.where(small.any(axis=1), probe[np.argmax(small, axis=1)], np.inf)
+        cost = stop * np.maximum(np.log(worst) - target, 1.0) / d
+    best = int(np.argmin(np.where(np.isnan(cost), np.inf, cost)))
+    return _Bend(
+        float(w1[best]), float(b[best]), float(w[best]), float(d[best]), hardy[:, best], float(worst[best]), float(stop[best])
+    )
 
 
-def _gap(contours: Contours, at: int) -> tuple[float, float]:
+def _gap(plan: Plan, row: int) -> tuple[float, float]:
     """The singularities on either side of ``-i p`` on the imaginary axis, as moment orders."""
-    p = float(contours.exponent[at])
-    slice_of = contours.slice_of[at]
+    p = float(plan.exponent[row])
+    slice_of = plan.slice_of[row]
     if p > 1.0:
-        return 1.0, float(contours.moments.high[slice_of])
-    return (float(contours.moments.low[slice_of]), 0.0) if p < 0.0 else (0.0, 1.0)
+        return 1.0, float(plan.moments.high[slice_of])
+    return (float(plan.moments.low[slice_of]), 0.0) if p < 0.0 else (0.0, 1.0)
 
 
-def _sum(
-    model: Model, tau: float, p: float, bend: _Bend, kernels: list[Kernel], k: Floats, target: float
-) -> tuple[list[RowValues], int]:
-    """The trapezoidal sum on the chosen contour, direct over the strikes."""
-    decades = max(float(np.log(bend.hardy)) - target, 1.0) if np.isfinite(bend.hardy) else 60.0
+def _bent_sum(
+    model: Model,
+    tau: float,
+    plan: Plan,
+    row: int,
+    kernels: list[Kernel],
+    sector: tuple[float, float, float],
+    span: tuple[float, float],
+) -> BentSum:
+    """Trapezoidal terms on the chosen contour with the bound's ingredients."""
+    bend = _choose(model, tau, plan, row, kernels, sector[:2], span, _SHORT)
+    if not np.isfinite(bend.stop):
+        bend = _choose(model, tau, plan, row, kernels, sector[:2], span, _LONG)
+    p = float(plan.exponent[row])
+    decades = max(float(np.log(bend.worst) - plan.log_target[row]), 1.0) if np.isfinite(bend.worst) else 60.0
     h = 2.0 * np.pi * bend.d / decades
-    count = min(int(np.ceil(bend.stop / h)) + 2, _MOST_NODES)
-    h = max(h, bend.stop / (count - 2))
-    y = h * np.arange(count)
-    z, dz = _line(bend.w1, bend.b, bend.w, y)
-    log_phi, size = model.log_cf_sized(z[None, :], tau, along_path=True)
+    stop = bend.stop if np.isfinite(bend.stop) else _LONG
+    count = min(int(np.ceil(stop / h)) + 2, _MOST_NODES)
+    h = max(h, stop / (count - 2))
+    z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count))
+    gradient: Any = None
+    gradient_size: Any = None
+    if any(kernel.parameter is not None for kernel in kernels):
+        found = model.log_cf_gradient(z[None, :], tau, along_path=True)
+        log_phi, size, gradient, gradient_size = found.log_value, found.size, found.gradient, found.gradient_size
+    else:
+        log_phi, size = model.log_cf_sized(z[None, :], tau, along_path=True)
     log_scale = float(log_phi[0, 0].real)
-    base = np.exp(log_phi[0] - log_scale) * dz * (h / np.pi)
-    base[0] *= 0.5
-    with np.errstate(over="ignore"):
+    with np.errstate(over="ignore", under="ignore", invalid="ignore"):
+        base = np.exp(log_phi[0] - log_scale) * dz * (h / np.pi)
         discretisation = bend.hardy / np.expm1(min(2.0 * np.pi * bend.d / h, 700.0))
-    k_low, k_high = float(k.min()), float(k.max())
-    lift = z.imag + p
-    largest = np.exp(np.maximum(lift * k_low, lift * k_high))
+        lift = z.imag + p
+        largest = np.exp(np.maximum(lift * span[0], lift * span[1]))
+    base[0] *= 0.5
     iz = 1j * z
-    out = []
-    for kernel in kernels:
-        psi = base * kernel.factor(iz)
-        modulus = np.abs(psi) * largest
-        rounding = EPS * float(modulus @ (size[0] + 8.0 + 0.5 * np.log2(count)))
-        slope = float(modulus @ np.abs(z))
-        tail = _tail(modulus, bend, h) * np.exp(log_scale)
-        total = np.empty(k.shape)
-        for start in range(0, k.shape[0], _STRIKE_BLOCK):
-            block = slice(start, start + _STRIKE_BLOCK)
-            total[block] = (np.exp(np.multiply.outer(k[block], p - iz)) @ psi).real
-        fill = np.ones(k.shape)
-        out.append(
-            assemble(
-                total=total,
-                log_scale=log_scale * fill,
-                rounding=rounding * fill,
-                slope=slope * fill,
-                pieces=(discretisation + tail) * fill,
-                k=k,
-                shifted=(kernel.shift - p) * k,
-                aliases=np.zeros(k.shape),
-            )
-        )
-    return out, count
+    psi = np.empty((len(kernels), count), dtype=np.complex128)
+    rounding, slope, pieces = (np.empty(len(kernels)) for _ in range(3))
+    lost = size[0] + 8.0 + 0.5 * np.log2(count)
+    for i, kernel in enumerate(kernels):
+        terms = base * kernel.factor(iz)
+        modulus = np.abs(terms) * largest
+        if kernel.parameter is None:
+            rounding[i] = EPS * float(modulus @ lost)
+        else:
+            g = gradient[kernel.parameter][0]
+            rounding[i] = EPS * float(modulus @ (lost * np.abs(g) + gradient_size[kernel.parameter][0]))
+            terms *= g
+            modulus *= np.abs(g)
+        slope[i] = float(modulus @ np.abs(z))
+        pieces[i] = discretisation[i] + _tail(modulus) * np.exp(log_scale)
+        psi[i] = terms
+    return BentSum(sector[2], sector[0] < 0.0, iz, psi, log_scale, rounding, slope, pieces)
 
 
-def _tail(modulus: Floats, bend: _Bend, h: float) -> float:
+def _tail(modulus: Floats) -> float:
     """Twice the geometric continuation of the last terms, which decay at least exponentially along the ray."""
     last, before = float(modulus[-1]), float(modulus[-4])
     if last == 0.0:

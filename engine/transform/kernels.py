@@ -1,53 +1,88 @@
-"""Payoff kernels: what multiplies the characteristic function, and what is known about the sum that results.
+"""Kernels: what multiplies the characteristic function, and what is known about the sum that results.
 
-With ``z = u - i p`` (so ``i z = p + i u``) a row computes ``exp((shift - p) k) / pi * Re sum h exp(-i u k) psi(u)``:
+With ``z = u - i p`` (so ``i z = p + i u``) a row computes ``W(k) = exp((shift - p) k) / pi * Re sum h exp(-i u k) psi(u)``,
+``psi = phi(z) factor(i z)``, or ``psi = phi(z) factor(i z) d log phi / d parameter``:
 
-* vanilla, ``shift = 1``: ``psi = phi(z) / (i z (i z - 1))``: the call for ``p > 1``, the put for ``p < 0``,
-  ``-E[min(S_T, K)] / F`` between (Lewis 2001; Lee 2004);
-* digital, ``shift = 0``: ``psi = phi(z) / (i z)``: ``P(X > k)`` for ``p > 0``, ``-P(X < k)`` for ``p < 0``.
+    kernel         shift  factor             W for p > 1        0 < p < 1              p < 0
+    vanilla          1    1/(iz (iz - 1))    call               -E[min(e^X, e^k)]      put
+    digital          0    1/iz               P(X > k)           P(X > k)               -P(X < k)
+    share digital    1    1/(iz - 1)         E[e^X; X > k]      -E[e^X; X < k]         -E[e^X; X < k]
+    density          0    1                  f(k)               f(k)                   f(k)
+    density slope    0    -iz                f'(k)              f'(k)                  f'(k)
 
-Aliases, by Poisson summation: the trapezoidal sum with period ``L`` is ``sum_m exp((p - shift) L m) V_p(k + m L)``. Far on
-the in-the-money side ``V_p`` is its intrinsic value plus an out-of-the-money tail; the intrinsic parts are geometric
-series, ``exact_aliases``. The tails are bounded by moments (``engine.transform.moments``).
+all per unit forward and undiscounted (Lewis 2001; Lee 2004). The share digital is the forward delta, the density gives
+gamma: with ``C = F c(ln K/F)``, ``dC/dF = E[e^X; X > k]`` and ``F d2C/dF2 = e^k f(k)``. A kernel with a parameter
+differentiates under the integral; ``d log phi`` vanishes at ``i z = 0`` and ``1``, so its poles are removable.
+
+Aliases, by Poisson summation: the trapezoidal sum with period ``L`` is ``sum_m exp((p - shift) L m) W(k + m L)``. Far on
+the in-the-money side a vanilla is its intrinsic value and a digital is 1, plus a tail; those parts are geometric
+series, ``exact_aliases``. What is left are tails (``engine.transform.bounds``).
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 
 from engine.arrays import Floats
 
-__all__ = ["DIGITAL", "VANILLA", "Kernel"]
+__all__ = ["DENSITY", "DENSITY_SLOPE", "DIGITAL", "GROWTH", "SHARE_DIGITAL", "VANILLA", "Kernel"]
+
+GROWTH = 2  # no d log phi / d parameter of the models here grows faster than |z|^2 along a line
 
 
 @dataclass(frozen=True, slots=True)
 class Kernel:
-    """``shift`` as above; ``power``: ``|psi| <= |phi| / u^power``; ``capped``: whether tails carry ``c(x) < 1``."""
+    """``shift`` as above; ``factor`` decays like ``u^-order``; ``parameter``: which derivative of ``log phi``
+    multiplies it, in the order of the model's gradient, or None."""
 
     name: str
     shift: float
-    power: int
-    capped: bool
+    order: int
+    parameter: int | None = None
+
+    def by(self, parameter: int) -> Kernel:
+        """The same kernel for the derivative by a parameter."""
+        return replace(self, parameter=parameter)
+
+    @property
+    def power(self) -> int:
+        """``|psi| <= const |phi| / u^power``."""
+        return self.order if self.parameter is None else self.order - GROWTH
+
+    @property
+    def markov(self) -> bool:
+        """Whether moments bound its tails: a vanilla or a digital itself, not a derivative."""
+        return self.parameter is None and self.order > 0
 
     def factor(self, iz: Any) -> Any:
-        """``psi / phi`` at ``i z``."""
-        return 1.0 / (iz * (iz - 1.0)) if self.power == 2 else 1.0 / iz
+        """``psi / phi`` at ``i z``, the derivative apart."""
+        if self.order == 2:
+            return 1.0 / (iz * (iz - 1.0))
+        if self.order == 1:
+            return 1.0 / (iz - self.shift)
+        return np.ones_like(iz) if self.order == 0 else -iz
 
-    def exact_aliases(self, p: Any, period: Any, growth: Any) -> Floats:
+    def exact_aliases(self, p: Any, period: Any, growth: Any) -> Floats | float:
         """The closed-form part of the aliases. ``growth = exp(k)`` of each strike; arrays broadcast."""
-        q_p = np.exp(-np.abs(p) * period)
-        geometric_p = q_p / -np.expm1(-np.abs(p) * period)
-        if self.power == 1:
-            return np.asarray(np.where(p > 0.0, geometric_p, -geometric_p))
-        a = np.abs(p - 1.0) * period
-        geometric_a = np.exp(-a) / -np.expm1(-a)
-        wings = geometric_a - growth * geometric_p
-        between = -geometric_a - growth * geometric_p
-        return np.asarray(np.where(p > 1.0, wings, np.where(p < 0.0, -wings, between)))
+        if not self.markov:
+            return 0.0
+        if self.order == 1:
+            far = np.abs(p - self.shift) * period
+            geometric = np.exp(-far) / -np.expm1(-far)
+            return np.asarray(np.where(p > self.shift, geometric, -geometric))
+        far_p, far_a = np.abs(p) * period, np.abs(p - 1.0) * period
+        geometric_p = growth * (np.exp(-far_p) / -np.expm1(-far_p))
+        geometric_a = np.exp(-far_a) / -np.expm1(-far_a)
+        sign_a = np.where(p > 1.0, 1.0, -1.0)
+        sign_p = np.where(p < 0.0, 1.0, -1.0)
+        return np.asarray(sign_a * geometric_a + sign_p * geometric_p)
 
 
-VANILLA = Kernel("vanilla", 1.0, 2, True)
-DIGITAL = Kernel("digital", 0.0, 1, False)
+VANILLA = Kernel("vanilla", 1.0, 2)
+DIGITAL = Kernel("digital", 0.0, 1)
+SHARE_DIGITAL = Kernel("share_digital", 1.0, 1)
+DENSITY = Kernel("density", 0.0, 0)
+DENSITY_SLOPE = Kernel("density_slope", 0.0, -1)

@@ -24,13 +24,14 @@ import numpy as np
 from engine.arrays import Floats, Ints
 from engine.protocols import Model
 from engine.transform.moments import SideMoments, side_moments
+from engine.transform.reach import Reach
 
-__all__ = ["Plan", "Strikes", "plan_rows"]
+__all__ = ["Plan", "plan_rows"]
 
 EPS = float(np.finfo(np.float64).eps)
 PLAIN_LIMIT = 4096
 SHARE = 0.02  # of the tolerance, for each of aliasing and truncation: leaves room for a value estimate off by 10
-ROUNDING = 200.0  # rounding units a row is assumed to lose; the reported bound uses the sums themselves
+ROUNDING = 200.0  # rounding units a row is assumed to lose at first; the reported bound uses the sums themselves
 MOST_ROWS = 12  # per side
 _EASY = 0.6  # of the loss allowed: within it, cost decides
 _LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 9, 10, 11, 12, 14)}))
@@ -39,22 +40,8 @@ _STEPS = 52
 
 
 @dataclass(frozen=True, slots=True)
-class Strikes:
-    """Ragged strikes of a batch: ``k = ln(K/F)`` of shape (n,), ``slice_of`` (n,) non-decreasing, ``starts`` (S,)."""
-
-    k: Floats
-    slice_of: Ints
-    starts: Ints
-
-    @property
-    def side_of(self) -> Ints:
-        """Call sides are 0..S-1, put sides S..2S-1."""
-        return np.where(self.k >= 0.0, self.slice_of, self.slice_of + self.starts.shape[0])
-
-
-@dataclass(frozen=True, slots=True)
 class Plan:
-    """Rows of a batch. Shapes: (R,) per row, (n,) for ``row_of``; ``moments`` per side."""
+    """Rows of a batch of S slices, sorted by slice. Shapes: (R,) per row; (2 S,) and (2 S, C) per side."""
 
     slice_of: Ints
     exponent: Floats
@@ -63,86 +50,75 @@ class Plan:
     log_target: Floats  # log of what each error piece may weigh, before the strike factor exp(-(p - 1) k)
     k_low: Floats
     k_high: Floats
-    row_of: Ints
+    base: Ints  # first row of each side
+    cuts: Floats  # strikes with |k| below the j-th cut of their side belong to a later row than base + j
     moments: SideMoments
 
 
-def plan_rows(model: Model, tau: Floats, strikes: Strikes, *, tolerance: float, digital: bool) -> Plan:
-    """Plan a batch. ``model`` stacked over slices, ``tau`` (S, 1), relative ``tolerance`` of out-of-the-money values."""
-    count = strikes.starts.shape[0]
-    kr = np.abs(strikes.k)
-    farthest = np.maximum.reduceat(kr, strikes.starts)
-    moments = side_moments(model, tau, farthest)
-    call = strikes.k >= 0.0
-    far = np.concatenate([_reach(np.where(c, kr, -np.inf), strikes.starts) for c in (call, ~call)])
-    near = np.concatenate([-_reach(np.where(c, -kr, -np.inf), strikes.starts) for c in (call, ~call)])
-    used = far >= 0.0
+@dataclass(frozen=True, slots=True)
+class _Cover:
+    """Rows by side: the side, its ordinal there, the grid point of the exponent, and the ``|k|`` it serves."""
+
+    side: Ints
+    ordinal: Ints
+    grid: Ints
+    low: Floats
+    high: Floats
+
+
+def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, power: int, rounding: float = ROUNDING) -> Plan:
+    """Plan a batch. ``model`` stacked over slices, ``tau`` (S, 1), relative ``tolerance`` of out-of-the-money values.
+
+    ``power``: the least decay of the kernels wanted; ``rounding``: units of rounding a row is assumed to lose.
+    """
+    count = tau.shape[0]
+    moments = side_moments(model, tau, np.maximum(reach.far[:count], reach.far[count:]))
+    used = reach.far >= 0.0
     sides = np.arange(2 * count)
-    log_far = np.where(used, moments.log_value(sides, np.where(used, far, 0.0)), np.inf)
-    floor = np.log(ROUNDING * EPS / tolerance)
-    single = np.minimum(log_far[:count], log_far[count:]) > floor
+    log_far = np.where(used, moments.log_value(sides, np.where(used, reach.far, 0.0)), np.inf)
+    single = np.minimum(log_far[:count], log_far[count:]) > np.log(rounding * EPS / tolerance)
     wing = used & ~np.concatenate([single, single])
-    side, grid, cuts = _cover(moments, sides[wing], near[wing], far[wing], tolerance)
-
-    # rows: first the single ones, then those of the wings; strikes find theirs by side and ordinal
-    single_slices = np.flatnonzero(single)
+    allowed = float(np.clip(np.log(tolerance / (rounding * EPS)), 0.5, 9.0))
+    cover = _cover(moments, sides[wing], reach.near[wing], reach.far[wing], allowed)
+    alone = np.flatnonzero(single)
+    slice_of = np.concatenate([alone, cover.side % count])
+    order = np.lexsort((cover_key(alone.shape[0], cover), slice_of))
+    x = moments.x[cover.side, cover.grid]
+    put = cover.side >= count
+    exponent = np.concatenate([np.full(alone.shape, 0.5), np.where(put, -x, 1.0 + x)])[order]
+    low, high = reach.interval()
+    k_low = np.concatenate([low[alone], np.where(put, -cover.high, cover.low)])[order]
+    k_high = np.concatenate([high[alone], np.where(put, -cover.low, cover.high)])[order]
+    slice_of = slice_of[order]
+    place = np.argsort(order)
     base = np.zeros(2 * count, dtype=np.int64)
-    base[single_slices] = np.arange(single_slices.shape[0])
-    base[single_slices + count] = np.arange(single_slices.shape[0])
-    order = np.argsort(side, kind="stable")
-    side, grid = side[order], grid[order]
-    first = np.searchsorted(side, sides[wing])
-    base[wing] = single_slices.shape[0] + first
-    ordinal = np.zeros(strikes.k.shape, dtype=np.int64)
-    side_of = strikes.side_of
+    base[alone] = base[alone + count] = place[: alone.shape[0]]
+    first = cover.ordinal == 0
+    base[cover.side[first]] = place[alone.shape[0] :][first]
+    cuts = np.full((2 * count, int(cover.ordinal.max(initial=0))), -np.inf)
     if cuts.shape[1]:
-        ordinal = (kr[:, None] < cuts_by_side(cuts, sides[wing], 2 * count)[side_of]).sum(axis=1)
-    row_of = base[side_of] + ordinal
-    x = moments.x[side, grid]
-    exponent = np.concatenate([np.full(single_slices.shape, 0.5), np.where(side < count, 1.0 + x, -x)])
-    slice_of = np.concatenate([single_slices, side % count])
-
-    filled, row_of = np.unique(row_of, return_inverse=True)
-    exponent, slice_of = exponent[filled], slice_of[filled]
-    k_low = np.full(filled.shape, np.inf)
-    k_high = np.full(filled.shape, -np.inf)
-    np.minimum.at(k_low, row_of, strikes.k)
-    np.maximum.at(k_high, row_of, strikes.k)
+        later = cover.ordinal > 0
+        cuts[cover.side[later], cover.ordinal[later] - 1] = cover.high[later]
     smallest = _smallest_scaled(moments, slice_of, exponent, k_low, k_high, count)
     log_target = smallest + np.log(tolerance * SHARE)
-    period = _period(moments, slice_of, exponent, k_low, k_high, log_target, smallest, tolerance, digital)
+    period = _period(moments, slice_of, exponent, k_low, k_high, log_target, smallest, tolerance, power, rounding)
     scale = np.sqrt(model.mean_variance(tau)).reshape(-1)[slice_of]
-    cut = _cutoff(model.take(slice_of), tau[slice_of], exponent, scale, log_target, digital)
+    cut = _cutoff(model.take(slice_of), tau[slice_of], exponent, scale, log_target, power)
     with np.errstate(invalid="ignore", over="ignore"):
         wanted = cut * period / (2.0 * np.pi) + 2.0
     plain = wanted <= PLAIN_LIMIT
     nodes = np.where(plain, _LADDER[np.searchsorted(_LADDER, np.where(plain, wanted, 1.0))], 0)
-    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, row_of, moments)
+    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, base, cuts, moments)
 
 
-def _reach(values: Floats, starts: Ints) -> Floats:
-    return np.asarray(np.maximum.reduceat(values, starts))
+def cover_key(alone: int, cover: _Cover) -> Ints:
+    """Sorting key of rows inside a slice: by side, then by ordinal; a single row has key 0."""
+    return np.concatenate([np.zeros(alone, dtype=np.int64), cover.side * MOST_ROWS + cover.ordinal])
 
 
-def cuts_by_side(cuts: Floats, sides: Ints, count: int) -> Floats:
-    """Spread the cuts of the listed sides over all ``count`` sides; -inf where a side has none."""
-    out = np.full((count, cuts.shape[1]), -np.inf)
-    out[sides] = cuts
-    return out
-
-
-def _cover(
-    moments: SideMoments, sides: Ints, near: Floats, far: Floats, tolerance: float
-) -> tuple[Ints, Ints, Floats]:
-    """Cover [near, far] of each side with the fewest exponents, from the far end inwards.
-
-    Returns the side and grid point of every row, and the cuts (sides, most - 1): strikes below a cut belong to the
-    next row.
-    """
-    allowed = float(np.clip(np.log(tolerance / (ROUNDING * EPS)), 1.0, 9.0))
-    rows_side: list[Ints] = []
-    rows_grid: list[Ints] = []
-    cuts: list[Floats] = []
+def _cover(moments: SideMoments, sides: Ints, near: Floats, far: Floats, allowed: float) -> _Cover:
+    """Cover [near, far] of each side with the fewest exponents, from the far end inwards."""
+    found: list[_Cover] = []
     todo = np.arange(sides.shape[0])
     far = far.copy()
     for ordinal in range(MOST_ROWS):
@@ -156,20 +132,25 @@ def _cover(
         done = worst[np.arange(todo.size), grid] <= allowed
         if ordinal == MOST_ROWS - 1:
             done[:] = True
-        grid = np.where(done, grid, np.argmax(loss_far <= allowed, axis=1))
-        rows_side.append(side)
-        rows_grid.append(grid)
-        cut = np.full(sides.shape, -np.inf)
-        left = ~done
-        if np.any(left):
-            cut[todo[left]] = _lowest_covered(moments, side[left], grid[left], far[todo[left]], allowed)
-            cut[todo[left]] = np.maximum(cut[todo[left]], near[todo[left]])
-        cuts.append(cut)
-        todo = todo[left]
-        far[todo] = cut[todo]
-    if not rows_side:
-        return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64), np.zeros((0, 0))
-    return np.concatenate(rows_side), np.concatenate(rows_grid), np.stack(cuts, axis=1)
+        low = near[todo]
+        if not done.all():
+            grid = np.where(done, grid, np.argmax(loss_far <= allowed, axis=1))
+            left = ~done
+            lowest = _lowest_covered(moments, side[left], grid[left], far[todo[left]], allowed)
+            low[left] = np.maximum(lowest, low[left])
+        found.append(_Cover(side, np.full(side.shape, ordinal), grid, low, far[todo]))
+        todo, low = todo[~done], low[~done]
+        far[todo] = low
+    if not found:
+        none = np.zeros(0, dtype=np.int64)
+        return _Cover(none, none, none, np.zeros(0), np.zeros(0))
+    return _Cover(
+        np.concatenate([c.side for c in found]),
+        np.concatenate([c.ordinal for c in found]),
+        np.concatenate([c.grid for c in found]),
+        np.concatenate([c.low for c in found]),
+        np.concatenate([c.high for c in found]),
+    )
 
 
 def _lowest_covered(moments: SideMoments, side: Ints, grid: Ints, far: Floats, allowed: float) -> Floats:
@@ -206,7 +187,8 @@ def _period(
     log_target: Floats,
     smallest: Floats,
     tolerance: float,
-    digital: bool,
+    power: int,
+    rounding: float,
 ) -> Floats:
     """Smallest ``L`` for which some moment order bounds the aliases on either side by the target."""
     count = moments.x.shape[0] // 2
@@ -215,7 +197,7 @@ def _period(
     for side, gap_sign, offset in ((slice_of, 1.0, -k_low), (slice_of + count, -1.0, k_high)):
         x = moments.x[side]
         gap = 1.0 + x - p if gap_sign > 0 else x + p
-        log_c = 0.0 if digital else moments.log_power[side]
+        log_c = moments.log_power[side] if power == 2 else 0.0
         room = log_c + moments.log_moment[side] - log_target[:, None]
         with np.errstate(divide="ignore", invalid="ignore"):
             length = np.where(gap > 0.0, np.maximum(room, 1.0) / gap, np.inf) + offset[:, None]
@@ -226,20 +208,20 @@ def _period(
     log_value = smallest - (exponent - 1.0) * k_far
     log_value = np.where(exponent < 0.0, log_value - k_far, log_value)
     with np.errstate(divide="ignore", invalid="ignore"):
-        exact = (np.log(0.25 * ROUNDING * EPS / tolerance) - log_value) / x_own
+        exact = (np.log(0.25 * rounding * EPS / tolerance) - log_value) / x_own
     exact = np.where(exponent == 0.5, 0.0, exact)
     return np.maximum(np.maximum(sides[0], sides[1]), np.maximum(exact, 0.0))
 
 
 def _cutoff(
-    model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, digital: bool
+    model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, power: int
 ) -> Floats:
     """Smallest ``U`` (to a few per cent) beyond which the envelope weighs less than the target; inf if none is near."""
     u = (3.0 / scale)[:, None] * _STEP ** np.arange(_STEPS)
-    level = model.log_envelope(exponent[:, None], u, tau)
-    if not digital:
-        level = level - np.log(u)
-    level = level - log_target[:, None]
+    level = model.log_envelope(exponent[:, None], u, tau) + (1 - power) * np.log(u)
+    if power < 1:  # such kernels are worth more than the value by their own factor at the saddle
+        level -= 0.5 * (2 - power) * np.log(np.abs(exponent * (exponent - 1.0)) + scale**-2)[:, None]
+    level -= log_target[:, None]
     above = np.sum(level > 0.0, axis=1)  # the envelope decreases
     at = np.arange(above.shape[0])
     hit = np.minimum(above, _STEPS - 1)

@@ -26,12 +26,13 @@ from scipy import fft
 
 from engine.arrays import Complexes, Floats, Ints
 
-__all__ = ["OVERSAMPLING", "WINDOW_ERROR", "grid_length", "inverse_window", "sum_at_points"]
+__all__ = ["MARGIN", "OVERSAMPLING", "WINDOW_ERROR", "grid_length", "grid_of", "inverse_window", "sums_at"]
 
 WIDTH = 16
 BETA = 2.30 * WIDTH
 OVERSAMPLING = 4
 WINDOW_ERROR = 4e-15  # of sum |c_j| / w_j; largest seen 6e-16 in tests/unit/test_window.py, kept with a margin
+MARGIN = WIDTH  # a point at the very end of a period reaches WIDTH / 2 beyond it
 _OFFSETS = np.arange(WIDTH)
 _BLOCK = 2048  # points per block: WIDTH x 2048 doubles stay in a second-level cache
 
@@ -54,26 +55,40 @@ def inverse_window(nodes: int) -> Floats:
     return out
 
 
-def sum_at_points(coefficients: Complexes, row: Ints, position: Floats) -> Floats:
-    """The sums at ``position`` (in periods, any real number) of the given ``row``.
+def grid_of(coefficients: Complexes) -> Floats:
+    """One period of the real grid with ``MARGIN`` values repeated at either end. Shape (..., grid_length + 2 MARGIN).
 
-    ``coefficients``: shape (rows, N), already multiplied by ``inverse_window(N)``. ``row``, ``position``: shape (n,).
-    Returns shape (n,). Error at most ``WINDOW_ERROR`` times the row's ``sum |c_j| / w_j`` (in the scale of ``f``).
+    ``coefficients``: shape (..., N), already multiplied by ``inverse_window(N)``.
     """
-    length = grid_length(coefficients.shape[1])
-    grid = fft.irfft(coefficients, n=length, axis=-1)
-    out = np.empty(position.shape)
-    for start in range(0, position.shape[0], _BLOCK):
-        part = slice(start, start + _BLOCK)
-        out[part] = _local_sum(grid, row[part], position[part], length)
+    length = grid_length(coefficients.shape[-1])
+    out = np.empty((*coefficients.shape[:-1], length + 2 * MARGIN))
+    out[..., MARGIN:-MARGIN] = fft.irfft(coefficients, n=length, axis=-1)
+    out[..., :MARGIN] = out[..., length : length + MARGIN]
+    out[..., -MARGIN:] = out[..., MARGIN : 2 * MARGIN]
     return out
 
 
-def _local_sum(grid: Floats, row: Ints, position: Floats, length: int) -> Floats:
-    """Window sum over WIDTH neighbours of each point."""
+def sums_at(grids: Floats, offset: Ints, length: Ints, position: Floats) -> Floats:
+    """The sums at ``position`` (n,), in periods, any real number: shape (K, n).
+
+    ``grids``: (K, total), rows of ``grid_of`` end to end; point ``i`` belongs to the row that starts at ``offset[i]`` with
+    ``length[i]`` points in its period. Error at most ``WINDOW_ERROR`` times the row's ``sum |c_j| / w_j`` (in the scale of ``f``).
+    """
+    out = np.empty((grids.shape[0], position.shape[0]))
+    for start in range(0, position.shape[0], _BLOCK):
+        part = slice(start, start + _BLOCK)
+        weight, index = _window(offset[part], length[part], position[part])
+        for k in range(grids.shape[0]):
+            np.einsum("ij,ij->i", weight, grids[k][index], out=out[k, part])
+    return out
+
+
+def _window(offset: Ints, length: Ints, position: Floats) -> tuple[Floats, Ints]:
+    """Weights and indices of the WIDTH neighbours of each point."""
     x = (position - np.floor(position)) * length
     first = np.ceil(x - 0.5 * WIDTH)
-    t = (_OFFSETS + (first - x)[:, None]) * (2.0 / WIDTH)
+    t = _OFFSETS + (first - x)[:, None]
+    t *= 2.0 / WIDTH
     np.multiply(t, t, out=t)
     np.subtract(1.0, t, out=t)
     np.maximum(t, 0.0, out=t)  # the end point |t| = 1 may round to 1 + eps
@@ -81,9 +96,4 @@ def _local_sum(grid: Floats, row: Ints, position: Floats, length: int) -> Floats
     t -= 1.0
     t *= BETA
     np.exp(t, out=t)
-    index = _OFFSETS + first.astype(np.int64)[:, None]
-    if index.size and (index[:, 0].min() < 0 or index[:, -1].max() >= length):
-        index %= length
-    index += (row * length)[:, None]
-    t *= grid.ravel()[index]
-    return np.asarray(t.sum(axis=1))
+    return t, (first.astype(np.int64) + (offset + MARGIN))[:, None] + _OFFSETS

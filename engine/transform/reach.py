@@ -1,0 +1,65 @@
+"""How far out the strikes of each slice reach: all that a plan needs to know of them.
+
+Ends are rounded outward to eighths of the slice's own scale, so that a plan stays the same while the forward ticks.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from engine.arrays import Floats, Ints
+
+__all__ = ["Reach", "Strikes", "reach_of"]
+
+_CELLS = 8.0  # cells per standard deviation, rounded down to a power of two in ``k``
+
+
+@dataclass(frozen=True, slots=True)
+class Strikes:
+    """Ragged strikes of a batch: ``k = ln(K/F)`` of shape (n,), ``slice_of`` (n,) non-decreasing, ``starts`` (S,)."""
+
+    k: Floats
+    slice_of: Ints
+    starts: Ints
+
+    @property
+    def side_of(self) -> Ints:
+        """Call sides are 0..S-1, put sides S..2S-1."""
+        return np.where(self.k >= 0.0, self.slice_of, self.slice_of + self.starts.shape[0])
+
+
+@dataclass(frozen=True, slots=True)
+class Reach:
+    """``near <= |k| <= far`` of the strikes on each side, (2 S,): calls first, then puts; ``far < 0`` where there is none."""
+
+    near: Floats
+    far: Floats
+
+    def take(self, members: Ints) -> Reach:
+        """The reach of some slices."""
+        both = np.concatenate([members, members + self.near.shape[0] // 2])
+        return Reach(self.near[both], self.far[both])
+
+    def interval(self) -> tuple[Floats, Floats]:
+        """The interval of ``k`` of each slice, (S,) each."""
+        count = self.near.shape[0] // 2
+        call, put = self.far[:count] >= 0.0, self.far[count:] >= 0.0
+        low = np.where(put, -self.far[count:], self.near[:count])
+        high = np.where(call, self.far[:count], -self.near[count:])
+        return low, high
+
+
+def reach_of(strikes: Strikes, scale: Floats) -> Reach:
+    """The reach of every side. ``scale`` (S,): standard deviation of ``X`` in each slice, > 0."""
+    kr = np.abs(strikes.k)
+    call = strikes.k >= 0.0
+    cell = np.exp2(np.floor(np.log2(scale / _CELLS)))
+    near, far = [], []
+    for side in (call, ~call):
+        far.append(np.ceil(np.maximum.reduceat(np.where(side, kr, -np.inf), strikes.starts) / cell) * cell)
+        near.append(np.floor(np.minimum.reduceat(np.where(side, kr, np.inf), strikes.starts) / cell) * cell)
+    far_all, near_all = np.concatenate(far), np.concatenate(near)
+    used = far_all >= 0.0
+    return Reach(np.where(used, near_all, 0.0), np.where(used, far_all, -1.0))

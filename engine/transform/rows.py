@@ -1,0 +1,139 @@
+"""Rows evaluated: all that strikes are summed from, ready for any strike within the plan's reach, and cuttable by slice.
+
+Grids of all rows lie end to end in one buffer, so that strikes of every slice and row are summed by one window pass;
+bent rows keep their terms and are summed directly.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from engine.arrays import Floats, Ints
+from engine.protocols import Model
+from engine.transform.deformed import BentSum, bent_sums
+from engine.transform.kernels import Kernel
+from engine.transform.lines import line_sums
+from engine.transform.plan import Plan
+from engine.transform.window import MARGIN, grid_length
+
+__all__ = ["Rows", "evaluate"]
+
+_BLOCK_NODES = 1 << 13  # nodes evaluated together: some 20 temporaries of 128 KiB each stay near the cache
+_MERGE = 1.6  # rows are given up to this many times the nodes they need when that saves a block of their own
+
+
+@dataclass(frozen=True, slots=True)
+class Rows:
+    """Rows of S slices, R in all, for K kernels. ``offset`` and ``length`` (R,) locate a row's grid in ``grid`` (K, total); bent rows
+    have length 0. ``base`` (2 S,) and ``cuts`` (2 S, C) as in the plan."""
+
+    exponent: Floats
+    period: Floats
+    nodes: Ints
+    first: Ints  # first row of each slice, and R at the end: (S + 1,)
+    base: Ints
+    cuts: Floats
+    offset: Ints
+    length: Ints
+    grid: Floats
+    log_scale: Floats
+    rounding: Floats
+    slope: Floats
+    pieces: Floats
+    bent: dict[int, list[BentSum]] = field(default_factory=dict)
+
+    @property
+    def stored(self) -> int:
+        """Numbers held in the grids and terms: what a cache counts."""
+        return int(self.grid.size + sum(2 * part.psi.size + 2 * part.iz.size for parts in self.bent.values() for part in parts))
+
+
+def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Rows:
+    """All rows of a plan. ``model`` stacked over the S slices, ``tau`` (S, 1)."""
+    count, kinds = plan.nodes.shape[0], len(kernels)
+    nodes, blocks = _blocks(plan)
+    length = np.where(nodes > 0, np.array([grid_length(int(n)) for n in nodes]), 0)
+    room = np.where(nodes > 0, length + 2 * MARGIN, 0)
+    offset = np.concatenate([[0], np.cumsum(room)])
+    grid = np.empty((kinds, int(offset[-1])))
+    log_scale = np.zeros(count)
+    rounding, slope, pieces = (np.zeros((kinds, count)) for _ in range(3))
+    for rows in blocks:
+        found = line_sums(
+            model.take(plan.slice_of[rows]), tau[plan.slice_of[rows]], plan, rows, kernels, nodes=int(nodes[rows[0]])
+        )
+        log_scale[rows], rounding[:, rows], slope[:, rows] = found.log_scale, found.rounding, found.slope
+        pieces[:, rows] = found.pieces
+        for i, r in enumerate(rows):
+            grid[:, offset[r] : offset[r] + room[r]] = found.grid[:, i]
+    bent: dict[int, list[BentSum]] = {}
+    for r in np.flatnonzero(plan.nodes == 0):
+        one = plan.slice_of[r : r + 1]
+        bent[int(r)] = bent_sums(model.take(one), float(tau[one[0], 0]), plan, int(r), kernels)
+        nodes[r] = sum(part.iz.shape[0] for part in bent[int(r)])
+    slices = plan.base.shape[0] // 2
+    first = np.searchsorted(plan.slice_of, np.arange(slices + 1))
+    return Rows(
+        plan.exponent, plan.period, nodes, first, plan.base, plan.cuts, offset[:-1], length, grid, log_scale,
+        rounding, slope, pieces, bent,
+    )  # fmt: skip
+
+
+def _blocks(plan: Plan) -> tuple[Ints, list[Ints]]:
+    """Nodes given to each row (rows of a slice share a count where that is cheap), and row numbers grouped by them,
+    at most ``_BLOCK_NODES`` nodes a group."""
+    most = np.zeros(plan.base.shape[0], dtype=np.int64)
+    np.maximum.at(most, plan.slice_of, plan.nodes)
+    largest = most[plan.slice_of]
+    nodes = np.where((plan.nodes > 0) & (_MERGE * plan.nodes >= largest), largest, plan.nodes)
+    out: list[Ints] = []
+    for size in np.unique(nodes):
+        if size > 0:
+            rows = np.flatnonzero(nodes == size)
+            step = max(1, _BLOCK_NODES // int(size))
+            out.extend(rows[i : i + step] for i in range(0, rows.shape[0], step))
+    return nodes, out
+
+
+def cut(rows: Rows, s: int) -> Rows:
+    """Slice ``s`` alone."""
+    a, b = int(rows.first[s]), int(rows.first[s + 1])
+    lo = int(rows.offset[a]) if b > a else 0
+    hi = int(rows.offset[b]) if b < rows.offset.shape[0] else rows.grid.shape[1]
+    side = np.array([s, s + rows.base.shape[0] // 2])
+    return Rows(
+        rows.exponent[a:b], rows.period[a:b], rows.nodes[a:b], np.array([0, b - a]), rows.base[side] - a, rows.cuts[side],
+        rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(), rows.log_scale[a:b],
+        rows.rounding[:, a:b], rows.slope[:, a:b], rows.pieces[:, a:b],
+        {r - a: parts for r, parts in rows.bent.items() if a <= r < b},
+    )  # fmt: skip
+
+
+def join(parts: list[Rows]) -> Rows:
+    """Slices cut apart, side by side again."""
+    if len(parts) == 1:
+        return parts[0]
+    counts = np.cumsum([0] + [part.exponent.shape[0] for part in parts])
+    sizes = np.cumsum([0] + [part.grid.shape[1] for part in parts])
+    most = max(part.cuts.shape[1] for part in parts)
+    cuts = np.full((2, len(parts), most), -np.inf)
+    for i, part in enumerate(parts):
+        cuts[:, i, : part.cuts.shape[1]] = part.cuts
+    return Rows(
+        np.concatenate([part.exponent for part in parts]),
+        np.concatenate([part.period for part in parts]),
+        np.concatenate([part.nodes for part in parts]),
+        counts,
+        np.array([[part.base[side] + counts[i] for i, part in enumerate(parts)] for side in (0, 1)]).ravel(),
+        cuts.reshape(2 * len(parts), most),
+        np.concatenate([part.offset + sizes[i] for i, part in enumerate(parts)]),
+        np.concatenate([part.length for part in parts]),
+        np.concatenate([part.grid for part in parts], axis=1),
+        np.concatenate([part.log_scale for part in parts]),
+        np.concatenate([part.rounding for part in parts], axis=1),
+        np.concatenate([part.slope for part in parts], axis=1),
+        np.concatenate([part.pieces for part in parts], axis=1),
+        {r + int(counts[i]): bent for i, part in enumerate(parts) for r, bent in part.bent.items()},
+    )
