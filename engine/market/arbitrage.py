@@ -3,215 +3,207 @@
 Only what could be *done* counts: one buys at asks and sells at bids. A set of quotes is an arbitrage when a portfolio
 of them costs less than nothing and can never pay less than nothing. Calls, ``K1 < K2 < K3``, discount factor ``D``:
 
-    vertical     bid(K2) > ask(K1)                                    (sell the dearer claim on less)
-                 bid(K1) - ask(K2) > D (K2 - K1)                      (receive more than the spread can ever cost)
-                 bid(K1) > D F                                        (an option dearer than the forward it is bounded by)
+    vertical     bid(K2) > ask(K1)                        (sell the claim on less for more)
+                 bid(K1) - ask(K2) > D (K2 - K1)          (receive more than the spread can ever cost)
     butterfly    (K3 - K1) bid(K2) > (K3 - K2) ask(K1) + (K2 - K1) ask(K3)
     calendar     bid(K, T1) / (D1 F1) > chord of ask(., T2) / (D2 F2) at the same K / F, T1 < T2
 
-Puts mirror the strikes; their bound is ``D K``. The calendar rule at equal forward moneyness: Kahale (2004), Risk 17(5);
-total variance form in Gatheral and Jacquier (2014), Quantitative Finance 14:59-71, lemma 2.1 (both from memory). It holds
-for European options when rates and dividend yields are not random. Between two later strikes the chord of their asks is
-what a portfolio dominating the missing strike costs (payoffs are convex in the strike), so no interpolated price
-is ever held against a quote; outside the later strikes nothing is compared.
+Puts mirror the strikes. The calendar rule at equal forward moneyness: Kahale (2004), Risk 17(5); its total variance
+form in Gatheral and Jacquier (2014), Quantitative Finance 14:59-71, lemma 2.1 (both from memory). It holds for European
+options when rates and dividend yields are not random. Between two later strikes the chord of their asks is what a
+portfolio dominating the missing strike costs (payoffs are convex in the strike), so no interpolated price is ever held
+against a quote; outside the later strikes nothing is compared.
 
-Which of the quotes is wrong? Every arbitrage found accuses those of its members that take part in the most arbitrages; the
-accused are set aside and the rest is searched again. A stale quote is at odds with many neighbours, each of which is at odds
-with it alone, so the stale one stands accused; where nothing tells them apart all members are.
-
-Searched are strikes 1, 2, 3, 4, 6, 8, 12, 16, ... ranks apart (all scales of the chain, about ``2 log2 n`` distances), so the cost
-is ``O(n log^2 n)`` and the arrays are flat; no loop runs over strikes.
+Whether an option can be sold into an arbitrage is decided exactly (``engine.market.ladder``): against the running
+minimum of the asks, or their convex hull. Which of the quotes is wrong? Every arbitrage found accuses those of its
+members that take part in the most arbitrages; the accused are set aside and the rest is searched again, until nothing
+is left. A stale quote is at odds with many neighbours, each of which is at odds with it alone, so the stale one stands
+accused; where nothing tells them apart all members are. Counted are, for each seller, the best partners of all and
+those 1, 2, 3, 4, 6, 8, 12, ... ranks away, so that the cost stays near ``O(n log n)`` on clean chains.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
-from functools import lru_cache
 from typing import Final
 
 import numpy as np
 
 from engine.arrays import Floats, Ints
 from engine.market.chain import Bools
+from engine.market.ladder import Ladder, cheapest, hull_neighbours, lower_hull
 
-__all__ = ["Side", "butterfly", "calendar", "vertical"]
+__all__ = ["butterfly", "calendar", "vertical"]
 
 _ROUNDING: Final = 32.0 * float(np.finfo(np.float64).eps)  # of the terms compared: products and sums of up to four
 _ROUNDS: Final = 8  # searches after setting the accused aside; what is still at odds then is accused as a whole
-_TRIPLES: Final = 2_000_000  # index triples held at once; longer chains are searched with symmetric wings alone
+_COMBINATIONS: Final = 1_000_000  # sellers x partners held at once; chains beyond lose the far partners, not the best
+_CHORDS: Final = ((0, 0), (0, 1), (1, 0), (1, 1))  # steps left and right of the later strikes next to an earlier one
+
+
+def vertical(ladder: Ladder, *, discount_factors: Floats) -> Bools:
+    """Rows (size,) accused of a vertical arbitrage.
+
+    ``discount_factors`` (m,) per expiry; widened by what they are uncertain; NaN leaves out the spread's upper bound.
+    """
+    return _accuse_in_rounds(ladder, lambda left: _vertical_members(left, discount_factors))
+
+
+def butterfly(ladder: Ladder) -> Bools:
+    """Rows (size,) accused of a butterfly arbitrage; needs no forward and no discount factor."""
+    return _accuse_in_rounds(ladder, _butterfly_members)
+
+
+def calendar(ladder: Ladder, *, years: Floats, uncertainties: Floats) -> Bools:
+    """Rows (size,) accused of a calendar arbitrage; levels are ``K / F`` (puts ``-K / F``), quotes divided by ``D F``.
+
+    ``years`` (m,) to each expiry. ``uncertainties`` (m, 2), relative, of ``F`` and ``D``: a violation must exceed what
+    they explain. A shift ``dF / F`` moves a normalised quote by its value and its level along the slope of the chord, a
+    shift ``dD / D`` by its value.
+    """
+    return _accuse_in_rounds(ladder, lambda left: _calendar_members(left, years, uncertainties))
+
+
+def _accuse_in_rounds(ladder: Ladder, search: Callable[[Ladder], Ints]) -> Bools:
+    accused = np.zeros(ladder.size, dtype=np.bool_)
+    left = ladder
+    for _ in range(_ROUNDS):
+        members = left.rows[search(left)]
+        if not members.size:
+            return accused
+        parts = np.bincount(members.ravel(), minlength=ladder.size)[members]
+        accused[members[parts == parts.max(axis=1, keepdims=True)]] = True
+        left = ladder.without(accused)
+    accused[left.rows[search(left)].ravel()] = True
+    return accused
 
 
 @dataclass(frozen=True, slots=True)
-class Side:
-    """The calls, or the puts with mirrored strikes, of one expiry in ascending order of ``ladder``.
+class _Partners:
+    """Positions (v, w) tried beside each of v sellers, and whether each is one of the same expiry, counted once."""
 
-    ``order`` (n,) maps to the rows of the chain; ``ladder`` is the strike for calls and minus the strike for puts, so that on either
-    side value falls along it; NaN in ``bids`` or ``asks`` where one cannot deal.
-    """
-
-    order: Ints
-    ladder: Floats
-    bids: Floats
-    asks: Floats
-
-    @classmethod
-    def calls(cls, strikes: Floats, bids: Floats, asks: Floats) -> Side:
-        """Quotes (n,) of calls in any order; quotes with neither bid nor ask and crossed ones are left out."""
-        return cls._of(strikes, bids, asks)
-
-    @classmethod
-    def puts(cls, strikes: Floats, bids: Floats, asks: Floats) -> Side:
-        """The same for puts."""
-        return cls._of(-strikes, bids, asks)
-
-    @classmethod
-    def _of(cls, ladder: Floats, bids: Floats, asks: Floats) -> Side:
-        order = np.argsort(ladder, kind="stable")
-        order = order[~(np.isnan(bids) & np.isnan(asks))[order] & ~(bids > asks)[order]]
-        return cls(order, ladder[order], bids[order], asks[order])
-
-    def without(self, rows: Bools) -> Side:
-        """The side with the quotes of ``rows`` (one per row of the chain) set aside."""
-        keep = ~rows[self.order]
-        return Side(self.order[keep], self.ladder[keep], self.bids[keep], self.asks[keep])
+    at: Ints
+    valid: Bools
 
 
-def vertical(side: Side, size: int, *, discount_factor: float, bound_slack: float = 0.0) -> Bools:
-    """Rows (size,) accused of a vertical arbitrage. ``discount_factor`` NaN leaves out the spread's upper bound.
-
-    ``bound_slack`` widens ``D`` in the upper bound (pass two standard errors). Bounds by the forward are in ``engine.market.cleaning``.
-    """
-
-    def search(part: Side) -> Ints:
-        return _vertical_members(part, discount_factor + bound_slack)
-
-    return _accuse_in_rounds(side, size, search)
+def _partners(ladder: Ladder, sellers: Ints, best: Ints, *, upward: bool, reach: int) -> _Partners:
+    steps = _distances(int(ladder.ranks.max()) + 1)[:reach]
+    near = sellers[:, None] + (steps if upward else -steps)
+    valid = (near >= 0) & (near < ladder.rows.size)
+    near = np.where(valid, near, 0)
+    valid &= ladder.expiries[near] == ladder.expiries[sellers][:, None]
+    extra = ~np.any(valid & (near == best[:, None]), axis=1) & (best >= 0)
+    return _Partners(np.column_stack([near, best]), np.column_stack([valid, extra]))
 
 
-def butterfly(side: Side, size: int) -> Bools:
-    """Rows (size,) accused of a butterfly arbitrage; needs no forward and no discount factor."""
-    return _accuse_in_rounds(side, size, _butterfly_members)
-
-
-def calendar(
-    sides: Sequence[Side], sizes: Sequence[int], *, expiries: Floats, scales: Floats, slacks: Floats
-) -> list[Bools]:
-    """Rows accused of a calendar arbitrage, per expiry, among sides of one kind with normalised quotes.
-
-    Each side's ladder is ``K / F`` (or ``-K / F``) and its quotes are divided by ``D F``. ``scales`` (m, 2) are the relative standard
-    errors of ``F`` and ``D``; a violation must exceed ``slacks`` of them: a shift ``dF / F`` moves a normalised quote by its value
-    and its strike along the slope of the chord, a shift ``dD / D`` by its value.
-    """
-    starts = np.concatenate([[0], np.cumsum(np.asarray(sizes, dtype=np.int64))])
-    accused = np.zeros(int(starts[-1]), dtype=np.bool_)
-    ranks = np.argsort(expiries, kind="stable")
-    left = list(sides)
-    for _ in range(_ROUNDS):
-        found: list[Ints] = []
-        for distance in _distances(len(left)):
-            for early, late in zip(ranks[:-distance], ranks[distance:], strict=True):
-                if expiries[early] < expiries[late]:
-                    error = slacks[early] * scales[early] + slacks[late] * scales[late]
-                    found.append(
-                        _calendar_members(left[early], left[late], error, int(starts[early]), int(starts[late]))
-                    )
-        members = np.concatenate(found) if found else np.zeros((0, 3), dtype=np.int64)
-        if not members.size:
-            break
-        accused |= _accused(members, accused.size)
-        left = [side.without(accused[starts[i] : starts[i + 1]]) for i, side in enumerate(left)]
-    return [accused[starts[i] : starts[i + 1]] for i in range(len(sides))]
-
-
-def _accuse_in_rounds(side: Side, size: int, search: Callable[[Side], Ints]) -> Bools:
-    accused = np.zeros(size, dtype=np.bool_)
-    left = side
-    for _ in range(_ROUNDS):
-        members = search(left)
-        if not members.size:
-            return accused
-        accused |= _accused(left.order[members], size)
-        left = side.without(accused)
-    accused[left.order[search(left)].ravel()] = True
-    return accused
-
-
-def _accused(members: Ints, size: int) -> Bools:
-    """Of each arbitrage (one row of ``members``) those members that take part in the most arbitrages."""
-    parts = np.bincount(members.ravel(), minlength=size)[members]
-    accused = np.zeros(size, dtype=np.bool_)
-    accused[members[parts == parts.max(axis=1, keepdims=True)]] = True
-    return accused
-
-
-def _vertical_members(side: Side, discount_factor: float) -> Ints:
-    distances = _distances(side.ladder.size)
-    if not distances:
-        return np.zeros((0, 2), dtype=np.int64)
-    low = np.concatenate([np.arange(side.ladder.size - d, dtype=np.int64) for d in distances])
-    high = low + np.repeat(np.asarray(distances), [side.ladder.size - d for d in distances])
-    rising = side.bids[high] > side.asks[low]
-    width = discount_factor * (side.ladder[high] - side.ladder[low])
-    gain = side.bids[low] - side.asks[high] - width
-    steep = gain > _ROUNDING * (side.bids[low] + side.asks[high] + width)
-    found = rising | steep
-    return np.column_stack([low[found], high[found]])
-
-
-def _butterfly_members(side: Side) -> Ints:
-    low, body, high = _triples(side.ladder.size)
-    left, right = side.ladder[body] - side.ladder[low], side.ladder[high] - side.ladder[body]
-    cost = right * side.asks[low] + left * side.asks[high]
-    income = (left + right) * side.bids[body]
-    found = (income - cost > _ROUNDING * (income + cost)) & (left > 0.0) & (right > 0.0)
-    return np.column_stack([low[found], body[found], high[found]])
-
-
-def _calendar_members(early: Side, late: Side, error: Floats, early_start: int, late_start: int) -> Ints:
-    """Violations of the early bids against four chords of the late asks around each: members in the numbering of all rows."""
-    none = np.zeros((0, 3), dtype=np.int64)
-    can_buy = np.flatnonzero(~np.isnan(late.asks))
-    can_sell = np.flatnonzero(early.bids > 0.0)
-    if can_buy.size < 2 or not can_sell.size:
-        return none
-    ladder, asks = late.ladder[can_buy], late.asks[can_buy]
-    points, bids = early.ladder[can_sell], early.bids[can_sell]
-    above = np.searchsorted(ladder, points, side="right")
-    left = (above - 1)[:, None] - np.array([0, 0, 1, 1])
-    right = above[:, None] + np.array([0, 1, 0, 1])
-    at_last = points == ladder[-1]  # the point is a strike: its own ask is the chord
-    right = np.where(at_last[:, None], np.minimum(right, ladder.size - 1), right)
-    inside = (left >= 0) & (right < ladder.size)
-    left, right = np.clip(left, 0, ladder.size - 1), np.clip(right, 0, ladder.size - 1)
-    gap = ladder[right] - ladder[left]
-    slope = np.divide(asks[right] - asks[left], gap, out=np.zeros_like(gap), where=gap > 0.0)
-    chord = asks[left] + slope * (points[:, None] - ladder[left])
-    value = np.abs(chord) + np.abs(bids)[:, None]
-    slack = error[0] * (value + np.abs(slope * points[:, None])) + error[1] * value
-    rows, chords = np.nonzero(inside & (bids[:, None] - chord > slack + _ROUNDING * value))
-    sellers = early.order[can_sell[rows]] + early_start
-    buyers = late.order[can_buy]
-    return np.column_stack([sellers, buyers[left[rows, chords]] + late_start, buyers[right[rows, chords]] + late_start])
-
-
-def _distances(count: int) -> tuple[int, ...]:
+def _distances(count: int) -> Ints:
     """1, 2, 3, 4, 6, 8, 12, 16, ... below ``count``."""
     powers = 1 << np.arange(max(count, 1).bit_length() + 1)
     both = np.unique(np.concatenate([powers, 3 * powers]))
-    return tuple(int(d) for d in both[both < count])
+    return both[both < count].astype(np.int64)
 
 
-@lru_cache(maxsize=64)
-def _triples(count: int) -> tuple[Ints, Ints, Ints]:
-    """Low wing, body and high wing of every butterfly searched in a chain of ``count`` strikes."""
-    distances = _distances(count)
-    down, up = (np.asarray(grid).ravel() for grid in np.meshgrid(distances, distances, indexing="ij"))
-    if down.size * count > _TRIPLES:
-        down = up = np.asarray(distances, dtype=np.int64)
-    fits = down + up < count
-    down, up = down[fits].astype(np.int64), up[fits].astype(np.int64)
-    lengths = count - down - up
-    first = np.repeat(np.cumsum(lengths) - lengths, lengths)
-    low = np.arange(int(lengths.sum()), dtype=np.int64) - first
-    return low, low + np.repeat(down, lengths), low + np.repeat(down + up, lengths)
+def _vertical_members(ladder: Ladder, discount_factors: Floats) -> Ints:
+    """Pairs of positions: the one sold, the one bought."""
+    carried = discount_factors[ladder.expiries] * ladder.levels
+    rising = _sales(ladder, np.zeros_like(carried), upward=False)
+    return np.concatenate([rising, _sales(ladder, carried, upward=True)])
+
+
+def _sales(ladder: Ladder, carried: Floats, *, upward: bool) -> Ints:
+    """Pairs (seller, buyer) with ``bid + carried > ask + carried`` of the other, beyond rounding."""
+
+    def over(seller: Ints, buyer: Ints) -> Bools:
+        bid, ask, here, there = ladder.bids[seller], ladder.asks[buyer], carried[seller], carried[buyer]
+        return bid - ask + (here - there) > _ROUNDING * (bid + ask + np.abs(here) + np.abs(there))
+
+    best = cheapest(ladder, ladder.asks + carried, upward=upward)
+    sellers = np.flatnonzero((best >= 0) & over(np.arange(best.size), best))
+    if not sellers.size:
+        return np.zeros((0, 2), dtype=np.int64)
+    reach = max(1, _COMBINATIONS // sellers.size)
+    partners = _partners(ladder, sellers, best[sellers], upward=upward, reach=reach)
+    row, column = np.nonzero(partners.valid & over(sellers[:, None], partners.at))
+    return np.column_stack([sellers[row], partners.at[row, column]])
+
+
+def _butterfly_members(ladder: Ladder) -> Ints:
+    """Triples of positions: low wing, body, high wing."""
+
+    def over(low: Ints, body: Ints, high: Ints) -> Bools:
+        down = ladder.levels[body] - ladder.levels[low]
+        up = ladder.levels[high] - ladder.levels[body]
+        cost = up * ladder.asks[low] + down * ladder.asks[high]
+        income = (down + up) * ladder.bids[body]
+        return (income - cost > _ROUNDING * (income + cost)) & (down > 0.0) & (up > 0.0)
+
+    near = hull_neighbours(ladder, lower_hull(ladder))
+    bodies = np.flatnonzero((near.left >= 0) & (near.right >= 0) & ~np.isnan(ladder.bids))
+    bodies = bodies[over(near.left[bodies], bodies, near.right[bodies])]
+    if not bodies.size:
+        return np.zeros((0, 3), dtype=np.int64)
+    reach = max(1, int((_COMBINATIONS / bodies.size) ** 0.5))
+    low = _partners(ladder, bodies, near.left[bodies], upward=False, reach=reach)
+    high = _partners(ladder, bodies, near.right[bodies], upward=True, reach=reach)
+    found = over(low.at[:, :, None], bodies[:, None, None], high.at[:, None, :])
+    row, left, right = np.nonzero(found & low.valid[:, :, None] & high.valid[:, None, :])
+    return np.column_stack([low.at[row, left], bodies[row], high.at[row, right]])
+
+
+def _calendar_members(ladder: Ladder, years: Floats, uncertainties: Floats) -> Ints:
+    """Triples of positions: the early quote sold, the two later ones bought (one twice where levels are equal)."""
+    found = [np.zeros((0, 3), dtype=np.int64)]
+    vertices, buyable = lower_hull(ladder), ladder.buyable
+    bid = np.flatnonzero(~np.isnan(ladder.bids))
+    for late in np.unique(ladder.expiries):
+        mine = ladder.expiries == late
+        early = bid[years[ladder.expiries[bid]] < years[late]]
+        hull = np.flatnonzero(vertices & mine)
+        if not hull.size or not early.size:
+            continue
+        best = _chords(ladder, early, hull, uncertainties, steps=_CHORDS[:1])
+        sellers = np.flatnonzero(best.over[:, 0])
+        if not sellers.size:
+            continue
+        left, right = best.left[sellers], best.right[sellers]
+        found.append(np.column_stack([early[sellers], left, right]))
+        near = _chords(ladder, early[sellers], np.flatnonzero(buyable & mine), uncertainties, steps=_CHORDS)
+        row, column = np.nonzero(near.over & ((near.left != left) | (near.right != right)))
+        found.append(np.column_stack([early[sellers[row]], near.left[row, column], near.right[row, column]]))
+    return np.concatenate(found)
+
+
+@dataclass(frozen=True, slots=True)
+class _Chords:
+    """Positions (v, w) of the ends of w chords for each of v early quotes, and whether its bid is over the chord."""
+
+    left: Ints
+    right: Ints
+    over: Bools
+
+
+def _chords(
+    ladder: Ladder, early: Ints, late: Ints, uncertainties: Floats, *, steps: tuple[tuple[int, int], ...]
+) -> _Chords:
+    """Chords of the asks of ``late`` (positions of one expiry) around the level of each of ``early`` (v,).
+
+    ``steps`` beyond the nearest position on the left and on the right, one pair a chord. A bid is over the chord when
+    it exceeds it by more than the forwards and discount factors of both expiries are uncertain, and rounding.
+    """
+    point, level = ladder.levels[early][:, None], ladder.levels[late]
+    after = np.searchsorted(level, ladder.levels[early], side="right")[:, None]
+    left = after - 1 - np.array([down for down, _ in steps])
+    right = after + np.array([up for _, up in steps])
+    right = np.where(point == level[-1], np.minimum(right, late.size - 1), right)
+    inside = (left >= 0) & (right < late.size)
+    left, right = late[np.clip(left, 0, late.size - 1)], late[np.clip(right, 0, late.size - 1)]
+    gap = ladder.levels[right] - ladder.levels[left]
+    slope = np.divide(ladder.asks[right] - ladder.asks[left], gap, out=np.zeros_like(gap), where=gap > 0.0)
+    chord = ladder.asks[left] + slope * (point - ladder.levels[left])
+    bids = ladder.bids[early][:, None]
+    of_discount = np.abs(chord) + bids
+    of_forward = of_discount + np.abs(slope * point)
+    error = uncertainties[ladder.expiries[early]] + uncertainties[ladder.expiries[late[0]]]
+    slack = error[:, :1] * of_forward + error[:, 1:] * of_discount + _ROUNDING * of_forward
+    return _Chords(left, right, inside & (bids - chord > slack))
