@@ -12,7 +12,8 @@ integrand on the real axis, so that the integral loses only a digit or two again
 The contour is the hyperbola ``w = c + i b sinh(y - i omega)`` (Boyarchenko and Levendorskii 2019), and the rule in
 ``y`` is the plain trapezoidal one, whose error falls like ``exp(-2 pi d / h)``. The step is halved until two successive
 sums agree to a little more than half the digits asked for: halving squares the error, so the finer sum then has them
-all with some to spare. If they never agree, ``NotReached`` is raised.
+all with some to spare. If they never agree, ``NotReached`` is raised. A value that Markov's inequality puts below
+``exp(-NEGLIGIBLE)``, far under the double range, comes back as zero.
 """
 
 from __future__ import annotations
@@ -25,8 +26,18 @@ from typing import Any
 import gmpy2
 from gmpy2 import mpc, mpfr
 
-__all__ = ["NotReached", "digital", "log_strike", "moment_strip", "otm_value", "otm_values", "sensitivity"]
+__all__ = [
+    "NotReached",
+    "digital",
+    "log_strike",
+    "moment_strip",
+    "otm_digitals",
+    "otm_value",
+    "otm_values",
+    "sensitivity",
+]
 
+NEGLIGIBLE = 1000
 HALVINGS = 9
 NODES = 60_000
 
@@ -75,6 +86,14 @@ def otm_values(model: Any, tau: float, forward: float, strikes: Sequence[float],
         return [_vanilla(at, edges, log_strike(strike, forward), strike >= forward, digits) for strike in strikes]
 
 
+def otm_digitals(model: Any, tau: float, forward: float, strikes: Sequence[float], *, digits: int = 20) -> list[Any]:
+    """Undiscounted probability of the out-of-the-money side: above where ``strike >= forward``, else below."""
+    with _precise(_bits(model, tau, digits)):
+        at = model.prepare(tau)
+        edges = at.edges()
+        return [_digital(at, edges, log_strike(strike, forward), strike >= forward, digits) for strike in strikes]
+
+
 def otm_value(model: Any, tau: Any, k: Any, *, digits: int = 20, lean: float = 1.0) -> Any:
     """The same at one log strike ``k``: a call where ``k >= 0``, else a put.
 
@@ -100,13 +119,15 @@ def digital(model: Any, tau: Any, k: Any, *, above: bool, digits: int = 20) -> A
     """``P(X > k)`` or, with ``above=False``, ``P(X < k)``, undiscounted, to relative digits."""
     with _precise(_bits(model, tau, digits)):
         at = model.prepare(tau)
-        low, high = at.edges()
-        k = mpfr(k)
-        if above:
-            return _contour_integral(at, (mpfr(0), high), k, DIGITAL, digits)
-        if -low > mpfr("1e-3"):
-            return -_contour_integral(at, (low, mpfr(0)), k, DIGITAL, digits)
-        return 1 - _contour_integral(at, (mpfr(0), high), k, DIGITAL, digits)
+        return _digital(at, at.edges(), mpfr(k), above, digits)
+
+
+def _digital(at: Any, edges: tuple[Any, Any], k: Any, above: bool, digits: int) -> Any:
+    if above:
+        return _contour_integral(at, (mpfr(0), edges[1]), k, DIGITAL, digits)
+    if -edges[0] > mpfr("1e-3"):
+        return -_contour_integral(at, (edges[0], mpfr(0)), k, DIGITAL, digits)
+    return 1 - _contour_integral(at, (mpfr(0), edges[1]), k, DIGITAL, digits)
 
 
 def moment_strip(model: Any, tau: float, *, digits: int = 30) -> tuple[Any, Any]:
@@ -191,6 +212,8 @@ def _contour_integral(
     if residue is None:
         residue = mpfr(0)
     p = _saddle(at, interval, k, payoff)
+    if residue == 0 and at.log_moment(mpc(p), None)[0].real - (p - payoff.shift) * k < -NEGLIGIBLE:
+        return mpfr(0)
     angle, half = _angles(at, k)
     angle = math.pi / 2 + lean * (angle - math.pi / 2)
     half *= 0.9 if lean == 1.0 else 0.45

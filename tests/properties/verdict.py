@@ -1,0 +1,94 @@
+"""The engine's smile against the multiple-precision reference: relative errors, and whether the bounds cover them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import gmpy2
+import numpy as np
+
+from engine.smile import Slice, price_smiles
+from engine.status import Payoff
+from tests.reference.mp_prices import otm_digitals, otm_values
+
+__all__ = ["FORWARD", "Verdict", "judge"]
+
+FORWARD = 100.0
+LEAST = gmpy2.mpfr("1e-200")  # of the forward: above it the relative error is judged
+
+
+@dataclass
+class Verdict:
+    """What was seen, over any number of smiles."""
+
+    smiles: int = 0
+    prices: int = 0
+    judged: int = 0  # prices above LEAST
+    relative: float = 0.0  # worst relative error among them
+    ratio: float = 0.0  # worst error / stated bound, over all prices
+    faults: list[str] = field(default_factory=list)
+
+    def add(self, other: Verdict) -> None:
+        """Take another verdict in."""
+        self.smiles += other.smiles
+        self.prices += other.prices
+        self.judged += other.judged
+        self.relative = max(self.relative, other.relative)
+        self.ratio = max(self.ratio, other.ratio)
+        self.faults += other.faults
+
+    def __str__(self) -> str:
+        return (
+            f"{self.smiles} smiles, {self.prices} prices: worst error / stated bound {self.ratio:.3g}; worst relative "
+            f"error {self.relative:.3g} over {self.judged} prices above 1e-200 of the forward; "
+            f"{len(self.faults)} faults"
+        )
+
+
+def judge(
+    model: Any,
+    twin: Any,
+    tau: float,
+    distances: Sequence[float],
+    *,
+    tolerance: float,
+    relative: float = math.inf,
+    digitals: bool = False,
+    digits: int = 20,
+) -> Verdict:
+    """Price one smile at ``distances`` (standard deviations from the forward) and compare every number.
+
+    ``twin`` is the reference's model. A fault: an error above the stated bound, or above ``relative`` where the value
+    is larger than LEAST of the forward. The reference takes the strikes as the exact doubles they are.
+    """
+    spread = math.sqrt(float(np.reshape(model.mean_variance(tau), -1)[0]))
+    strikes = FORWARD * np.exp(spread * np.asarray(distances))
+    payoffs = np.full(strikes.shape, Payoff.OTM, dtype=np.uint8)
+    exact = [FORWARD * v for v in otm_values(twin, tau, FORWARD, strikes, digits=digits)]
+    if digitals:
+        exact += otm_digitals(twin, tau, FORWARD, strikes, digits=digits)
+        binary = np.where(strikes >= FORWARD, Payoff.DIGITAL_CALL, Payoff.DIGITAL_PUT).astype(np.uint8)
+        payoffs, strikes = np.concatenate([payoffs, binary]), np.concatenate([strikes, strikes])
+    one = Slice(tau, FORWARD, 1.0, strikes, payoffs)
+    found = price_smiles(model, [one], tolerance=tolerance, implied_vols=False)[0]
+    out = Verdict(smiles=1)
+    for i, true in enumerate(exact):
+        price, bound = float(found.prices[i]), float(found.error_bounds[i])
+        with gmpy2.context(gmpy2.get_context(), precision=160):
+            error = abs(gmpy2.mpfr(price) - true)
+            ratio = float(error / gmpy2.mpfr(bound)) if bound > 0.0 else (0.0 if error == 0 else math.inf)
+            worth = true > (LEAST * FORWARD if payoffs[i] == Payoff.OTM else LEAST)
+            share = float(error / true) if worth else 0.0
+        out.prices += 1
+        out.judged += int(worth)
+        out.relative, out.ratio = max(out.relative, share), max(out.ratio, ratio)
+        if not ratio <= 1.0 or not share <= relative:
+            out.faults.append(
+                f"{Payoff(found.payoffs[i]).word} {model} tau={tau!r} strike={float(strikes[i])!r} forward={FORWARD} "
+                f"tolerance={tolerance!r}: {price!r} is off by {float(error):.3g}, stated bound {bound:.3g} "
+                f"(ratio {ratio:.3g}), relative {share:.3g}; {found.transform}"
+            )
+    return out
