@@ -16,10 +16,11 @@ against a quote; outside the later strikes nothing is compared.
 
 Whether an option can be sold into an arbitrage is decided exactly (``engine.market.ladder``): against the running
 minimum of the asks, or their convex hull. Which of the quotes is wrong? Every arbitrage found accuses those of its
-members that take part in the most arbitrages; the accused are set aside and the rest is searched again, until nothing
-is left. A stale quote is at odds with many neighbours, each of which is at odds with it alone, so the stale one stands
-accused; where nothing tells them apart all members are. Counted are, for each seller, the best partners of all and
-those 1, 2, 3, 4, 6, 8, 12, ... ranks away, so that the cost stays near ``O(n log n)`` on clean chains.
+members that are ``suspect`` on other evidence, or, without any, that take part in the most arbitrages; the accused are
+set aside and the rest is searched again, until nothing is left. A stale quote is at odds with many neighbours, each of
+which is at odds with it alone, so the stale one stands accused; where nothing tells them apart all members are. Counted
+are, for each seller, the best partners of all and those 1, 2, 3, 4, 6, 8, 12, ... ranks away, so that the cost stays
+near ``O(n log n)`` on clean chains.
 """
 
 from __future__ import annotations
@@ -42,37 +43,39 @@ _COMBINATIONS: Final = 1_000_000  # sellers x partners held at once; chains beyo
 _CHORDS: Final = ((0, 0), (0, 1), (1, 0), (1, 1))  # steps left and right of the later strikes next to an earlier one
 
 
-def vertical(ladder: Ladder, *, discount_factors: Floats) -> Bools:
+def vertical(ladder: Ladder, *, discount_factors: Floats, suspects: Bools) -> Bools:
     """Rows (size,) accused of a vertical arbitrage.
 
-    ``discount_factors`` (m,) per expiry; widened by what they are uncertain; NaN leaves out the spread's upper bound.
+    ``discount_factors`` (m,) per expiry, raised by what they are uncertain; NaN leaves out the spread's upper bound.
+    ``suspects`` (size,): rows to accuse first, here and below.
     """
-    return _accuse_in_rounds(ladder, lambda left: _vertical_members(left, discount_factors))
+    return _accuse_in_rounds(ladder, suspects, lambda left: _vertical_members(left, discount_factors))
 
 
-def butterfly(ladder: Ladder) -> Bools:
+def butterfly(ladder: Ladder, *, suspects: Bools) -> Bools:
     """Rows (size,) accused of a butterfly arbitrage; needs no forward and no discount factor."""
-    return _accuse_in_rounds(ladder, _butterfly_members)
+    return _accuse_in_rounds(ladder, suspects, _butterfly_members)
 
 
-def calendar(ladder: Ladder, *, years: Floats, uncertainties: Floats) -> Bools:
+def calendar(ladder: Ladder, *, years: Floats, uncertainties: Floats, suspects: Bools) -> Bools:
     """Rows (size,) accused of a calendar arbitrage; levels are ``K / F`` (puts ``-K / F``), quotes divided by ``D F``.
 
     ``years`` (m,) to each expiry. ``uncertainties`` (m, 2), relative, of ``F`` and ``D``: a violation must exceed what
     they explain. A shift ``dF / F`` moves a normalised quote by its value and its level along the slope of the chord, a
     shift ``dD / D`` by its value.
     """
-    return _accuse_in_rounds(ladder, lambda left: _calendar_members(left, years, uncertainties))
+    return _accuse_in_rounds(ladder, suspects, lambda left: _calendar_members(left, years, uncertainties))
 
 
-def _accuse_in_rounds(ladder: Ladder, search: Callable[[Ladder], Ints]) -> Bools:
+def _accuse_in_rounds(ladder: Ladder, suspects: Bools, search: Callable[[Ladder], Ints]) -> Bools:
     accused = np.zeros(ladder.size, dtype=np.bool_)
     left = ladder
     for _ in range(_ROUNDS):
         members = left.rows[search(left)]
         if not members.size:
             return accused
-        parts = np.bincount(members.ravel(), minlength=ladder.size)[members]
+        parts = np.bincount(members.ravel(), minlength=ladder.size)
+        parts = np.where(suspects, members.size, parts)[members]
         accused[members[parts == parts.max(axis=1, keepdims=True)]] = True
         left = ladder.without(accused)
     accused[left.rows[search(left)].ravel()] = True

@@ -13,8 +13,8 @@ with a fitted forward or discount factor grants ``slack`` standard errors of it)
   value of its good neighbours, interpolated in the strike; both legs where the distances are alike (within a factor of
   two) or there are no good neighbours on both sides.
 - ``vertical_arbitrage``, ``butterfly_arbitrage``, ``calendar_arbitrage``: see ``engine.market.arbitrage``; crossed
-  quotes are not held against others. A bid above the maximum (``D F`` for a call, ``D K`` for a put) is vertical,
-  against strike zero.
+  quotes are not held against others, and a quote with one of the flags before is to blame before one without. A bid
+  above the maximum (``D F`` for a call, ``D K`` for a put) is vertical, against strike zero.
 - ``wide``: the spread is above ``WIDE_FRACTION`` of the midpoint, or above ``WIDE_MULTIPLE`` times the median spread of
   the nine nearest two-sided quotes of its side and expiry, itself among them.
 """
@@ -78,10 +78,9 @@ def flag_chain(
         name: np.concatenate([getattr(one, name) for one in expiries])
         for name in ("call_bids", "call_asks", "put_bids", "put_asks")
     }
-    calls = _flag_side(chain, columns["call_bids"], columns["call_asks"], calls=True)
-    puts = _flag_side(chain, columns["put_bids"], columns["put_asks"], calls=False)
-    _set(calls, QuoteFlag.PARITY_OUTLIER, np.concatenate([legs.calls for legs in blamed]))
-    _set(puts, QuoteFlag.PARITY_OUTLIER, np.concatenate([legs.puts for legs in blamed]))
+    call_legs, put_legs = (np.concatenate([getattr(legs, kind) for legs in blamed]) for kind in ("calls", "puts"))
+    calls = _flag_side(chain, columns["call_bids"], columns["call_asks"], call_legs, calls=True)
+    puts = _flag_side(chain, columns["put_bids"], columns["put_asks"], put_legs, calls=False)
     ends = np.cumsum([one.size for one in expiries])[:-1]
     return [ExpiryFlags(c, p) for c, p in zip(np.split(calls, ends), np.split(puts, ends), strict=True)]
 
@@ -99,8 +98,8 @@ def _end_to_end(expiries: Sequence[ChainExpiry], fits: Sequence[ForwardFit], sla
     )
 
 
-def _flag_side(chain: _Chain, bids: Floats, asks: Floats, *, calls: bool) -> FlagCodes:
-    """Every flag but the parity outliers, for the calls or the puts (n,) of all expiries."""
+def _flag_side(chain: _Chain, bids: Floats, asks: Floats, outliers: Bools, *, calls: bool) -> FlagCodes:
+    """Every flag for the calls or the puts (n,) of all expiries; the suspicion grows from one arbitrage to the next."""
     e = chain.expiries
     forward, discount = chain.forward[e], chain.discount[e]
     line = discount * (forward - chain.strikes)
@@ -113,15 +112,23 @@ def _flag_side(chain: _Chain, bids: Floats, asks: Floats, *, calls: bool) -> Fla
     unit = discount * forward
     normalised = side(chain.strikes / forward, bids / unit, asks / unit, e)
     uncertainties = np.column_stack([chain.forward_margin / chain.forward, chain.discount_margin / chain.discount])
-    steep = vertical(ladder, discount_factors=chain.discount + chain.discount_margin)
+    low = asks < lower - chain.line_margin - rounding
+    suspects = low | outliers
+    steep = vertical(ladder, discount_factors=chain.discount + chain.discount_margin, suspects=suspects)
+    steep |= (bids > upper + rounding) & ~(bids > asks)
+    suspects |= steep
+    bent = butterfly(ladder, suspects=suspects)
+    suspects |= bent
+    falling = calendar(normalised, years=chain.years, uncertainties=uncertainties, suspects=suspects)
     codes = np.zeros(bids.size, dtype=np.uint16)
     _set(codes, QuoteFlag.CROSSED, bids > asks)
     _set(codes, QuoteFlag.NO_BID, ~np.isnan(asks) & ~(bids > 0.0))
     _set(codes, QuoteFlag.NO_ASK, (bids > 0.0) & np.isnan(asks))
-    _set(codes, QuoteFlag.BELOW_INTRINSIC, asks < lower - chain.line_margin - rounding)
-    _set(codes, QuoteFlag.VERTICAL_ARBITRAGE, steep | ((bids > upper + rounding) & ~(bids > asks)))
-    _set(codes, QuoteFlag.BUTTERFLY_ARBITRAGE, butterfly(ladder))
-    _set(codes, QuoteFlag.CALENDAR_ARBITRAGE, calendar(normalised, years=chain.years, uncertainties=uncertainties))
+    _set(codes, QuoteFlag.BELOW_INTRINSIC, low)
+    _set(codes, QuoteFlag.PARITY_OUTLIER, outliers)
+    _set(codes, QuoteFlag.VERTICAL_ARBITRAGE, steep)
+    _set(codes, QuoteFlag.BUTTERFLY_ARBITRAGE, bent)
+    _set(codes, QuoteFlag.CALENDAR_ARBITRAGE, falling)
     _set(codes, QuoteFlag.WIDE, _wide(chain, bids, asks))
     return codes
 

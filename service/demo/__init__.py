@@ -1,0 +1,1 @@
+"""The bundled demonstration: an invented option chain and what makes it."""
