@@ -79,9 +79,7 @@ class Model(Protocol):
         strip and avoids the imaginary axis; the logarithm is then continued along it."""
         ...
 
-    def log_cf_sized(
-        self, z: Complexes, tau: Floats | float, *, along_path: bool = False
-    ) -> tuple[Complexes, Floats]:
+    def log_cf_sized(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> tuple[Complexes, Floats]:
         """``log_cf`` and the cap on its absolute rounding error, in units of machine epsilon, in one evaluation."""
         ...
 

@@ -82,5 +82,3 @@ def side_by_side(slices: Sequence[Slice]) -> Batch:
         np.array([s.forward for s in slices]),
         np.array([s.discount_factor for s in slices]),
     )
-
-

@@ -180,8 +180,6 @@ def _answers(batch: Batch, k: Floats, otm: _Otm, tolerance: float, implied_vols:
     ends = np.append(batch.starts[1:], batch.strikes.shape[0])
     resolved = resolved.astype(np.uint8)
     return [
-        PricedSlice(
-            prices[a:b], bounds[a:b], vols[a:b], statuses[a:b], resolved[a:b], report
-        )
+        PricedSlice(prices[a:b], bounds[a:b], vols[a:b], statuses[a:b], resolved[a:b], report)
         for a, b, report in zip(batch.starts, ends, otm.reports, strict=True)
     ]

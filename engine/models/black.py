@@ -50,9 +50,7 @@ class Black:
         """``log E[exp(i z X)]``; entire in ``z``, so paths need no care."""
         return np.asarray(-0.5 * self.mean_variance(tau) * (z * (z + 1j)))
 
-    def log_cf_sized(
-        self, z: Complexes, tau: Floats | float, *, along_path: bool = False
-    ) -> tuple[Complexes, Floats]:
+    def log_cf_sized(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> tuple[Complexes, Floats]:
         """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
         value = self.log_cf(z, tau)
         return value, 4.0 * np.abs(value)

@@ -74,12 +74,17 @@ class Heston:
 
     def _exponent(self, w: Any, tau: Any, along_path: bool, sized: bool) -> FactorExponent:
         linear = self.sigma * (self.sigma - 2.0 * self.kappa * self.rho)
+        square = self.sigma * self.sigma * self._rho_gap
+        d2 = self.kappa * self.kappa + w * (linear - square * w)
+        if along_path:  # where the path starts on the axis, D^2 < 0 is approached from the side the path goes to
+            d2.imag = np.where(w.imag == 0.0, np.copysign(0.0, linear - 2.0 * square * w.real), d2.imag)
         return factor_exponent(
             w * (w - 1.0),
             self.kappa - (self.rho * self.sigma) * w,
-            self.kappa * self.kappa + w * (linear - (self.sigma * self.sigma * self._rho_gap) * w),
+            d2,
             v0=self.v0,
-            kappa_theta=self.kappa * self.theta,
+            kappa=self.kappa,
+            theta=self.theta,
             sigma=self.sigma,
             tau=tau,
             along_path=along_path,
@@ -94,9 +99,7 @@ class Heston:
         """``log E[exp(i z X)]``, shape of ``z`` broadcast with the parameters. ``tau`` in years, > 0."""
         return self._exponent(1j * z, tau, along_path, False).log_value
 
-    def log_cf_sized(
-        self, z: Complexes, tau: Floats | float, *, along_path: bool = False
-    ) -> tuple[Complexes, Floats]:
+    def log_cf_sized(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> tuple[Complexes, Floats]:
         """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
         exponent = self._exponent(1j * z, tau, along_path, True)
         return exponent.log_value, 4.0 * np.asarray(exponent.size)
@@ -115,7 +118,8 @@ class Heston:
             b + 0j,
             d2 + 0j,
             v0=self.v0,
-            kappa_theta=self.kappa * self.theta,
+            kappa=self.kappa,
+            theta=self.theta,
             sigma=self.sigma,
             tau=tau,
         )

@@ -15,8 +15,8 @@ Tricks, and why they are safe. ``D^2`` is expanded in ``w`` so that ``1 - rho^2`
 and nothing cancels at ``rho -> +-1``. ``1 - E`` is built from expm1 and half-angle sines, so ``S -> tau`` smoothly as
 ``D tau -> 0``. ``r`` takes whichever of its two forms adds numbers of one sign. ``log1p(sigma^2 y)/sigma^2`` tends to
 ``y`` as ``sigma -> 0`` with no switch: ``sigma^2`` is only floored at 1e-60 inside that ratio, where the relative
-change is below ``1e-60 |y|``. For a variance that starts far below where it will be (``kappa tau`` small, ``v0`` much
-smaller than ``kappa theta tau``) the two parts of ``A`` cancel, and ``A`` is summed from its series instead.
+change is below ``1e-60 |y|``. For a variance that starts far below its long-run level and has no time to get there
+(``kappa tau`` small) the two parts of ``A`` cancel, and ``A`` is summed from its series instead.
 
 The principal logarithm is the continuous one along the real direction inside the strip (Lord and Kahl 2010, from
 memory). On a path that leaves the strip it is continued along the path.
@@ -56,7 +56,8 @@ def factor_exponent(
     d2: Any,
     *,
     v0: Any,
-    kappa_theta: Any,
+    kappa: Any,
+    theta: Any,
     sigma: Any,
     tau: Any,
     along_path: bool = False,
@@ -67,6 +68,7 @@ def factor_exponent(
     Units: ``tau`` in years, variances per year. Accuracy: a few units of rounding times ``size``.
     """
     sigma2 = sigma * sigma
+    kappa_theta = kappa * theta
     d = np.sqrt(d2)
     if not d.all():
         d = np.where(d == 0.0, _TINY, d)
@@ -79,7 +81,7 @@ def factor_exponent(
     drift = r * tau
     a_part = drift - _log_ratio(x, s * r, sigma2, along_path)
     size_a = kappa_theta * np.abs(drift) if sized else None
-    if np.any(kappa_theta * tau > 16.0 * v0):
+    if np.any(kappa_theta > 8.0 * kappa * v0):
         a_part, size_a = _young_variance(a_part, size_a, d=d, r=r, x=x, s=s, tau=tau, sigma2=sigma2, kt=kappa_theta)
     log_value = kappa_theta * a_part + b_part
     if size_a is None:

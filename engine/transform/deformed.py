@@ -27,7 +27,7 @@ import numpy as np
 
 from engine.arrays import Complexes, Floats
 from engine.protocols import Model
-from engine.transform.bounds import moduli
+from engine.transform.bounds import log_moduli
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
 from engine.transform.record import EPS
@@ -43,10 +43,12 @@ _STRIKE_BLOCK = 256
 
 @dataclass(frozen=True, slots=True)
 class BentSum:
-    """One bent contour, for the strikes on one side of ``k_inf``: arguments ``i z`` (N,), terms ``psi`` (K, N) in units of
-    ``exp(log_scale)``, and per kernel (K,) what a bound needs."""
+    """One bent contour, for the strikes on one side of ``k_inf``: arguments ``i z`` (N,), terms ``psi`` (K, N) at the
+    strike ``k_near`` nearest to ``k_inf``, where they are largest, in units of ``exp(log_scale)``, and per kernel (K,) what
+    a bound needs."""
 
     k_inf: float
+    k_near: float
     down: bool
     iz: Complexes
     psi: Complexes
@@ -64,7 +66,7 @@ class BentSum:
         out = np.empty((self.psi.shape[0], k.shape[0]))
         for start in range(0, k.shape[0], _STRIKE_BLOCK):
             part = slice(start, start + _STRIKE_BLOCK)
-            out[:, part] = (np.exp(np.multiply.outer(k[part], p - self.iz)) @ self.psi.T).real.T
+            out[:, part] = (np.exp(np.multiply.outer(k[part] - self.k_near, p - self.iz)) @ self.psi.T).real.T
         return out
 
 
@@ -76,7 +78,7 @@ class _Bend:
     b: float
     w: float
     d: float
-    hardy: Floats  # (H+ + H-) / pi per kernel, before the strike factor
+    hardy: Floats  # (H+ + H-) / pi per kernel, before the strike factor, in units of M(p)
     worst: float  # the largest of them, every kernel scaled to the vanilla at y = 0
     stop: float
 
@@ -107,12 +109,13 @@ def _choose(
     kernels: list[Kernel],
     sector: tuple[float, float],
     span: tuple[float, float],
+    log_scale: float,
     length: float,
 ) -> _Bend:
     """The cheapest of a few bends: by the step its analyticity allows and the length its decay needs."""
     sign, limit = sector
     p = float(plan.exponent[row])
-    target = float(plan.log_target[row])
+    target = float(plan.log_target[row]) - log_scale
     lower, upper = _gap(plan, row)
     share, fill = np.array(_CANDIDATES).T
     w = sign * 0.5 * share * limit
@@ -123,10 +126,11 @@ def _choose(
     probe = np.arange(0.0, length + 0.5 * _PROBE_STEP, _PROBE_STEP)
     z, dz = _line(np.tile(w1, 3)[:, None], np.tile(b, 3)[:, None], angle, probe)
     with np.errstate(over="ignore", invalid="ignore", divide="ignore", under="ignore"):
-        level = np.log(moduli(model, z, np.full((1, 1), tau), kernels, along_path=True)) + np.log(np.abs(dz))
+        level = log_moduli(model, z, np.full((1, 1), tau), kernels, along_path=True) + np.log(np.abs(dz))
         lift = z.imag + p
         level += np.maximum(lift * span[0], lift * span[1])
         level[np.isnan(level)] = np.inf
+        level -= log_scale
         weight = np.exp(level) * (2.0 * _PROBE_STEP / np.pi)
     weight = weight.reshape(len(kernels), 3, len(_CANDIDATES), probe.shape[0])
     start = weight[:, 0, :, :1]
@@ -140,7 +144,13 @@ def _choose(
         cost = stop * np.maximum(np.log(worst) - target, 1.0) / d
     best = int(np.argmin(np.where(np.isnan(cost), np.inf, cost)))
     return _Bend(
-        float(w1[best]), float(b[best]), float(w[best]), float(d[best]), hardy[:, best], float(worst[best]), float(stop[best])
+        float(w1[best]),
+        float(b[best]),
+        float(w[best]),
+        float(d[best]),
+        hardy[:, best],
+        float(worst[best]),
+        float(stop[best]),
     )
 
 
@@ -163,11 +173,14 @@ def _bent_sum(
     span: tuple[float, float],
 ) -> BentSum:
     """Trapezoidal terms on the chosen contour with the bound's ingredients."""
-    bend = _choose(model, tau, plan, row, kernels, sector[:2], span, _SHORT)
-    if not np.isfinite(bend.stop):
-        bend = _choose(model, tau, plan, row, kernels, sector[:2], span, _LONG)
     p = float(plan.exponent[row])
-    decades = max(float(np.log(bend.worst) - plan.log_target[row]), 1.0) if np.isfinite(bend.worst) else 60.0
+    log_scale = float(np.ravel(model.log_moment(np.full((1, 1), p), tau))[0])
+    bend = _choose(model, tau, plan, row, kernels, sector[:2], span, log_scale, _SHORT)
+    if not np.isfinite(bend.stop):
+        bend = _choose(model, tau, plan, row, kernels, sector[:2], span, log_scale, _LONG)
+    decades = (
+        max(float(np.log(bend.worst) - plan.log_target[row]) + log_scale, 1.0) if np.isfinite(bend.worst) else 60.0
+    )
     h = 2.0 * np.pi * bend.d / decades
     stop = bend.stop if np.isfinite(bend.stop) else _LONG
     count = min(int(np.ceil(stop / h)) + 2, _MOST_NODES)
@@ -180,14 +193,14 @@ def _bent_sum(
         log_phi, size, gradient, gradient_size = found.log_value, found.size, found.gradient, found.gradient_size
     else:
         log_phi, size = model.log_cf_sized(z[None, :], tau, along_path=True)
-    log_scale = float(log_phi[0, 0].real)
-    with np.errstate(over="ignore", under="ignore", invalid="ignore"):
-        base = np.exp(log_phi[0] - log_scale) * dz * (h / np.pi)
-        discretisation = bend.hardy / np.expm1(min(2.0 * np.pi * bend.d / h, 700.0))
-        lift = z.imag + p
-        largest = np.exp(np.maximum(lift * span[0], lift * span[1]))
-    base[0] *= 0.5
     iz = 1j * z
+    k_near = span[0] if sector[0] < 0.0 else span[1]
+    lift = z.imag + p
+    with np.errstate(over="ignore", under="ignore", invalid="ignore"):
+        base = np.exp(log_phi[0] - log_scale + k_near * (p - iz)) * dz * (h / np.pi)
+        discretisation = bend.hardy / np.expm1(min(2.0 * np.pi * bend.d / h, 700.0))
+        largest = np.exp(np.maximum(lift * (span[0] - k_near), lift * (span[1] - k_near)))
+    base[0] *= 0.5
     psi = np.empty((len(kernels), count), dtype=np.complex128)
     rounding, slope, pieces = (np.empty(len(kernels)) for _ in range(3))
     lost = size[0] + 8.0 + 0.5 * np.log2(count)
@@ -202,9 +215,9 @@ def _bent_sum(
             terms *= g
             modulus *= np.abs(g)
         slope[i] = float(modulus @ np.abs(z))
-        pieces[i] = discretisation[i] + _tail(modulus) * np.exp(log_scale)
+        pieces[i] = discretisation[i] + _tail(modulus)
         psi[i] = terms
-    return BentSum(sector[2], sector[0] < 0.0, iz, psi, log_scale, rounding, slope, pieces)
+    return BentSum(sector[2], k_near, sector[0] < 0.0, iz, psi, log_scale, rounding, slope, pieces)
 
 
 def _tail(modulus: Floats) -> float:
@@ -215,4 +228,4 @@ def _tail(modulus: Floats) -> float:
     if not before > last:
         return np.inf
     ratio = (last / before) ** (1.0 / 3.0)
-    return 2.0 * last * ratio / (1.0 - ratio)
+    return 2.0 * last * ratio / (1.0 - ratio) if ratio < 1.0 else np.inf

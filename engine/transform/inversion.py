@@ -3,7 +3,8 @@
 A batch goes through in chunks of slices: plan, rows, strikes. Every row's raw value is turned into the value of the
 out-of-the-money side (calls for ``k >= 0``, puts for ``k < 0``) per unit forward. Vanillas and digitals are projected onto the
 interval where the truth lies, ``[0, min(1, e^k)]`` and ``[0, 1]``, which never increases the error. Where a bound misses the
-tolerance, the slice is planned once more for the rounding that was seen, and the better of both is kept.
+tolerance (the plan's estimates of the values were too high), the slice is planned once more, tighter by what was missing, and the
+better of both is kept.
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ from engine.errors import RefusedError
 from engine.protocols import Model
 from engine.transform import plan_cache
 from engine.transform.kernels import Kernel
-from engine.transform.plan import ROUNDING, Plan, plan_rows
+from engine.transform.plan import Plan, plan_rows
 from engine.transform.reach import Strikes, reach_of
 from engine.transform.record import EPS, RowValues, assemble
 from engine.transform.rows import Rows, evaluate
@@ -28,7 +29,8 @@ __all__ = ["Contour", "Inversion", "invert"]
 
 _CHUNK = 64  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
 _HARD_NODES = 4096  # what a bent row is counted as against the node limit: its probes and its sum
-_CLOSER = 16.0  # the second plan assumes this many times the rounding of the first
+_REPAIRS = 2
+_TIGHTEST = 2.0**-16  # of the tolerance, for the second plan
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,7 +64,16 @@ def invert(
     n = strikes.k.shape[0]
     value, bound = np.empty((len(kernels), n)), np.empty((len(kernels), n))
     contours: list[Contour] = []
-    left = limit
+    with np.errstate(over="ignore", under="ignore", invalid="ignore", divide="ignore"):  # a bound says what was lost
+        _by_chunks(model, tau, strikes, tolerance, kernels, limit, value, bound, contours)
+    return Inversion(value, bound, contours)
+
+
+def _by_chunks(
+    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], left: int,
+    value: Floats, bound: Floats, contours: list[Contour],
+) -> None:  # fmt: skip
+    count, n = tau.shape[0], strikes.k.shape[0]
     for start in range(0, count, _CHUNK):
         stop = min(start + _CHUNK, count)
         members = np.arange(start, stop)
@@ -70,25 +81,28 @@ def invert(
         hi = int(strikes.starts[stop]) if stop < count else n
         part = Strikes(strikes.k[lo:hi], strikes.slice_of[lo:hi] - start, strikes.starts[start:stop] - lo)
         sub = model.take(members) if count > _CHUNK else model
-        rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, ROUNDING, left)
+        rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, left)
         value[:, lo:hi], bound[:, lo:hi] = _at_strikes(rows, part, kernels)
         contours.extend(_contours(rows))
-        missed = (bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (value[0, lo:hi] > 1e-290)
-        if np.any(missed):
-            left = _improve(sub, tau[start:stop], part, np.flatnonzero(missed), lo, tolerance, kernels, value, bound, left)
-    return Inversion(value, bound, contours)
+        for _ in range(_REPAIRS):
+            missed = np.flatnonzero((bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (value[0, lo:hi] > 1e-290))
+            if missed.shape[0] == 0:
+                break
+            left = _improve(sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, left)
 
 
 def _improve(
     model: Model, tau: Floats, strikes: Strikes, missed: Ints, lo: int, tolerance: float, kernels: list[Kernel],
     value: Floats, bound: Floats, limit: int,
 ) -> int:  # fmt: skip
-    """Plan the missed strikes closer to their own saddles and keep what is better."""
+    """Plan the missed strikes for the tolerance that would have been met, and keep what is better."""
+    at = lo + missed
+    short = float(np.min(value[0, at] / bound[0, at])) * tolerance
+    tighter = tolerance * float(np.exp2(np.floor(np.log2(np.clip(short, _TIGHTEST, 0.5)))))
     members, slice_of = np.unique(strikes.slice_of[missed], return_inverse=True)
     again = Strikes(strikes.k[missed], slice_of, np.searchsorted(slice_of, np.arange(members.shape[0])))
-    rows, left = _prepared(model.take(members), tau[members], again, tolerance, kernels, _CLOSER * ROUNDING, limit)
+    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit)
     new_value, new_bound = _at_strikes(rows, again, kernels)
-    at = lo + missed
     better = new_bound < bound[:, at]
     value[:, at] = np.where(better, new_value, value[:, at])
     bound[:, at] = np.where(better, new_bound, bound[:, at])
@@ -96,7 +110,7 @@ def _improve(
 
 
 def _prepared(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], rounding: float, limit: int
+    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int
 ) -> tuple[Rows, int]:
     """Rows of a chunk, from the cache where all inputs are the same, and what is left of the node limit."""
     reach = reach_of(strikes, np.sqrt(model.mean_variance(tau)).reshape(-1))
@@ -104,14 +118,16 @@ def _prepared(
 
     def fresh(members: Ints | None) -> Rows:
         some = members is not None
-        sub, sub_tau, sub_reach = (model.take(members), tau[members], reach.take(members)) if some else (model, tau, reach)
-        plan = plan_rows(sub, sub_tau, sub_reach, tolerance=tolerance, power=power, rounding=rounding)
+        sub, sub_tau, sub_reach = (
+            (model.take(members), tau[members], reach.take(members)) if some else (model, tau, reach)
+        )
+        plan = plan_rows(sub, sub_tau, sub_reach, tolerance=tolerance, power=power)
         wanted = _counted(plan)
         if wanted > limit:
             raise RefusedError("slices", f"would need about {wanted} transform nodes", allowed=f"at most {limit}")
         return evaluate(sub, sub_tau, plan, kernels)
 
-    rows = plan_cache.rows_of(model, tau, reach, (tolerance, rounding, tuple(kernels)), fresh)
+    rows = plan_cache.rows_of(model, tau, reach, (tolerance, tuple(kernels)), fresh)
     return rows, limit - int(np.sum(np.where(rows.length > 0, rows.nodes, _HARD_NODES)))
 
 
@@ -122,7 +138,8 @@ def _counted(plan: Plan) -> int:
 def _contours(rows: Rows) -> list[Contour]:
     ends = rows.first
     return [
-        Contour(rows.exponent[a:b], rows.nodes[a:b], rows.length[a:b] == 0) for a, b in zip(ends[:-1], ends[1:], strict=True)
+        Contour(rows.exponent[a:b], rows.nodes[a:b], rows.length[a:b] == 0)
+        for a, b in zip(ends[:-1], ends[1:], strict=True)
     ]
 
 
@@ -154,7 +171,9 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
     value, bound = np.empty_like(totals), np.empty_like(totals)
     straight_row = rows.length[row] > 0 if rows.bent else True
     for i, kernel in enumerate(kernels):
-        aliases = kernel.exact_aliases(exponent, period, growth)
+        aliases, alias_size = kernel.exact_aliases(exponent, period, k)
+        if rows.bent:
+            aliases, alias_size = np.where(straight_row, aliases, 0.0), np.where(straight_row, alias_size, 0.0)
         raw = assemble(
             total=totals[i],
             log_scale=log_scale,
@@ -163,7 +182,8 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
             pieces=pieces[i],
             k=k,
             shifted=(kernel.shift - exponent) * k,
-            aliases=np.where(straight_row, aliases, 0.0) if rows.bent else aliases,
+            aliases=aliases,
+            alias_size=alias_size,
         )
         found = out_of_the_money(kernel, raw, exponent, k, growth)
         value[i], bound[i] = found.value, found.bound
@@ -173,15 +193,20 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
 def out_of_the_money(kernel: Kernel, raw: RowValues, exponent: Floats, k: Floats, growth: Floats) -> RowValues:
     """Raw values to those of the out-of-the-money side: direct or by the complement where the row is on the other one."""
     if not kernel.markov:
-        return raw
-    call = k >= 0.0
+        lost = np.isnan(raw.value) | np.isnan(raw.bound)
+        return RowValues(np.where(lost, 0.0, raw.value), np.where(lost, np.inf, raw.bound)) if lost.any() else raw
     if kernel.order == 2:
-        inside = (exponent > 0.0) & (exponent < 1.0)
         most = np.minimum(1.0, growth)
-        value = np.where(inside, raw.value + most, raw.value)
-        return RowValues(np.clip(value, 0.0, most), raw.bound + np.where(inside, 2.0 * EPS * most, 0.0))
-    above = exponent > kernel.shift  # the raw value is P(X > k), else -P(X < k), under the measure of the shift
-    size = np.where(above, raw.value, -raw.value)
-    value = np.where(call == above, size, 1.0 - size)
-    return RowValues(np.clip(value, 0.0, 1.0), raw.bound + np.where(call == above, 0.0, 2.0 * EPS))
-
+        other = (exponent > 0.0) & (exponent < 1.0)
+        value = np.where(other, raw.value + most, raw.value)
+    else:  # the raw value is P(X > k), else -P(X < k), under the measure of the shift
+        most = np.ones_like(k)
+        above = exponent > kernel.shift
+        other = above != (k >= 0.0)
+        size = np.where(above, raw.value, -raw.value)
+        value = np.where(other, 1.0 - size, size)
+    bound = raw.bound + np.where(other, 2.0 * EPS, 0.0) * most
+    lost = np.isnan(value) | ~(bound <= most)  # nothing but the interval is known
+    if lost.any():
+        value, bound = np.where(np.isnan(value), 0.0, value), np.where(lost, most, bound)
+    return RowValues(np.clip(value, 0.0, most), bound)

@@ -26,8 +26,6 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Floats
-
 __all__ = ["DENSITY", "DENSITY_SLOPE", "DIGITAL", "GROWTH", "SHARE_DIGITAL", "VANILLA", "Kernel"]
 
 GROWTH = 2  # no d log phi / d parameter of the models here grows faster than |z|^2 along a line
@@ -65,20 +63,22 @@ class Kernel:
             return 1.0 / (iz - self.shift)
         return np.ones_like(iz) if self.order == 0 else -iz
 
-    def exact_aliases(self, p: Any, period: Any, growth: Any) -> Floats | float:
-        """The closed-form part of the aliases. ``growth = exp(k)`` of each strike; arrays broadcast."""
+    def exact_aliases(self, p: Any, period: Any, k: Any) -> tuple[Any, Any]:
+        """The closed-form part of the aliases and a cap on its rounding error in units of machine epsilon."""
         if not self.markov:
-            return 0.0
+            return 0.0, 0.0
         if self.order == 1:
-            far = np.abs(p - self.shift) * period
-            geometric = np.exp(-far) / -np.expm1(-far)
-            return np.asarray(np.where(p > self.shift, geometric, -geometric))
-        far_p, far_a = np.abs(p) * period, np.abs(p - 1.0) * period
-        geometric_p = growth * (np.exp(-far_p) / -np.expm1(-far_p))
-        geometric_a = np.exp(-far_a) / -np.expm1(-far_a)
-        sign_a = np.where(p > 1.0, 1.0, -1.0)
-        sign_p = np.where(p < 0.0, 1.0, -1.0)
-        return np.asarray(sign_a * geometric_a + sign_p * geometric_p)
+            geometric, size = _geometric(np.abs(p - self.shift) * period, 0.0)
+            return np.where(p > self.shift, geometric, -geometric), size
+        by_p, size_p = _geometric(np.abs(p) * period, k)
+        by_a, size_a = _geometric(np.abs(p - 1.0) * period, 0.0)
+        return np.where(p > 1.0, by_a, -by_a) + np.where(p < 0.0, by_p, -by_p), size_p + size_a
+
+
+def _geometric(far: Any, k: Any) -> tuple[Any, Any]:
+    """``e^k sum_{m >= 1} exp(-m far)`` and its rounding: the exponents' own and a few units."""
+    value = np.exp(k - far) / -np.expm1(-far)
+    return value, value * (6.0 + far + np.abs(k))
 
 
 VANILLA = Kernel("vanilla", 1.0, 2)

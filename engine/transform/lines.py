@@ -26,8 +26,8 @@ __all__ = ["LineSums", "line_sums"]
 
 @dataclass(frozen=True, slots=True)
 class LineSums:
-    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding`` and ``slope`` (change per unit of ``k``) in the same
-    units; ``pieces``: aliasing and truncation bound before the strike factor; (K, r) each."""
+    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding``, ``slope`` (change per unit of ``k``) and ``pieces``
+    (aliasing and truncation bound before the strike factor) in the same units; (K, r) each."""
 
     grid: Floats
     log_scale: Floats
@@ -76,6 +76,6 @@ def line_sums(model: Model, tau: Floats, plan: Plan, rows: Ints, kernels: list[K
         rounding[i] = EPS * lost + (WINDOW_ERROR + 4.0 * EPS) * spread
         slope[i] = np.einsum("ij,ij->i", modulus, u)
         np.multiply(base, inverse, out=psi[i])
-    pieces = alias_bounds(model, tau, plan, rows, kernels)
-    pieces += truncation_bounds(model, tau, plan.exponent[rows], u[:, -1], kernels, last)
+    pieces = alias_bounds(model, tau, plan, rows, kernels, log_scale)
+    pieces += truncation_bounds(model, tau, plan.exponent[rows], u[:, -1], kernels, last, log_scale)
     return LineSums(grid_of(psi), log_scale, rounding, slope, pieces)

@@ -5,7 +5,7 @@ geometric in the middle and crowding towards the edges of the strip. Puts are ca
 the reflection ``p -> 1 - p``, ``k -> -k`` both sides read alike; a *side* is one of the two.
 
     J(x, kr) = log M - log(x (1 + x)) - x kr               saddle function at reflected log-moneyness kr >= 0
-    log V(kr) ~ min_x J - log(2 pi (s^2 + 1/x^2 + 1/(1+x)^2)) / 2      (Lord and Kahl 2007; an estimate, for planning)
+    log V(kr) ~ min_x J - log(2 pi J'') / 2                            (Lord and Kahl 2007; an estimate, for planning)
     V(kr) <= c(x) M exp(-x kr),   c(x) = x^x / (1 + x)^(1 + x)          (Markov's inequality; a bound, for aliases)
 
 The last line is ``(e^X - e^k)^+ <= c(x) e^{p X - (p - 1) k}``, tight where the power touches the payoff.
@@ -19,11 +19,13 @@ import numpy as np
 
 from engine.arrays import Floats, Ints
 from engine.protocols import Model
+from engine.transform.reach import Reach
 
 __all__ = ["SideMoments", "side_moments"]
 
-POINTS = 40
+POINTS = 64
 _LOWEST = 0.15  # of 1/s: below it the pole at x = 0 dominates every strike
+_QUADRUPLINGS = 16
 _HIGHEST = 40.0  # of 1/s, at least: Gaussian aliases at exp(-40^2/2) underflow any double
 
 
@@ -37,7 +39,7 @@ class SideMoments:
     log_power: Floats  # log c(x)
     low: Floats  # edges of the strip per slice, (S,)
     high: Floats
-    spread: Floats  # log(2 pi (s^2 + 1/x^2 + 1/(1+x)^2)) / 2
+    spread: Floats  # log(2 pi J'') / 2
 
     def log_value(self, side: Ints, kr: Floats) -> Floats:
         """Estimated log of the out-of-the-money value per unit forward in the side's own measure. Shape of ``kr``."""
@@ -52,21 +54,25 @@ class SideMoments:
         return np.asarray(level - level.min(axis=1, keepdims=True))
 
 
-def side_moments(model: Model, tau: Floats, farthest: Floats) -> SideMoments:
-    """Moment grids of every slice. ``tau``: (S, 1); ``farthest``: (S,), the largest ``|k|`` asked of each slice."""
+def side_moments(model: Model, tau: Floats, reach: Reach) -> SideMoments:
+    """Moment grids of every slice. ``tau``: (S, 1)."""
     s = np.sqrt(model.mean_variance(tau)).reshape(-1, 1)
     low, high = (np.reshape(edge, (-1, 1)) for edge in model.strip(tau))
-    top = np.maximum(_HIGHEST, 3.0 * farthest[:, None] / s)
-    ramp = np.linspace(0.0, 1.0, POINTS)
-    g = np.exp(np.log(_LOWEST) + ramp * np.log(top / _LOWEST)) / s
-    x_call = 1.0 / (1.0 / g + 1.0 / (high - 1.0))
-    x_put = 1.0 / (1.0 / g - 1.0 / low)
-    log_moment = model.log_moment(np.concatenate([1.0 + x_call, -x_put], axis=1), tau)
-    x = np.concatenate([x_call, x_put])
-    log_m = np.concatenate([log_moment[:, :POINTS], log_moment[:, POINTS:]])
+    scale = np.concatenate([s, s])
+    room = np.concatenate([high - 1.0, -low])
+    top = np.maximum(_HIGHEST, 3.0 * reach.far[:, None] / scale)
+    x, log_m = _grid(model, tau, scale, room, top)
+    slope = (log_m[:, -1] - log_m[:, -2]) / (x[:, -1] - x[:, -2])
+    short = (slope < reach.far) & (x[:, -1] < 0.999 * room[:, 0])
+    if short.any():  # the saddle of the farthest strike lies beyond: X is all but bounded on that side
+        top = np.where(short[:, None], top * _farther(model, tau, scale, room, top, reach.far), top)
+        x, log_m = _grid(model, tau, scale, room, top)
     log_x = np.log(x)
     log_1x = np.log1p(x)
-    both = np.concatenate([s, s])
+    curvature = np.empty_like(x)
+    curvature[:, 1:-1] = 2.0 * np.diff(np.diff(log_m, axis=1) / np.diff(x, axis=1), axis=1) / (x[:, 2:] - x[:, :-2])
+    curvature[:, 0], curvature[:, -1] = curvature[:, 1], curvature[:, -2]
+    variance = np.maximum(curvature, 0.0)
     return SideMoments(
         x=x,
         log_moment=log_m,
@@ -74,5 +80,30 @@ def side_moments(model: Model, tau: Floats, farthest: Floats) -> SideMoments:
         log_power=x * log_x - (1.0 + x) * log_1x,
         low=low[:, 0],
         high=high[:, 0],
-        spread=0.5 * np.log(2.0 * np.pi * (both**2 + 1.0 / x**2 + 1.0 / (1.0 + x) ** 2)),
+        spread=0.5 * np.log(2.0 * np.pi * (variance + 1.0 / x**2 + 1.0 / (1.0 + x) ** 2)),
     )
+
+
+def _grid(model: Model, tau: Floats, scale: Floats, room: Floats, top: Floats) -> tuple[Floats, Floats]:
+    """Grids ``x`` and ``log M`` there, (2 S, POINTS): geometric up to ``top / scale``, crowding towards the edges."""
+    g = np.exp(np.log(_LOWEST) + np.linspace(0.0, 1.0, POINTS) * np.log(top / _LOWEST)) / scale
+    x = 1.0 / (1.0 / g + 1.0 / room)
+    return x, _by_side(model, tau, x)
+
+
+def _by_side(model: Model, tau: Floats, x: Floats) -> Floats:
+    """``log M`` at ``1 + x`` for the call sides and ``-x`` for the put sides: shape of ``x``, (2 S, m)."""
+    count, points = tau.shape[0], x.shape[1]
+    found = model.log_moment(np.concatenate([1.0 + x[:count], -x[count:]], axis=1), tau)
+    return np.concatenate([found[:, :points], found[:, points:]])
+
+
+def _farther(model: Model, tau: Floats, scale: Floats, room: Floats, top: Floats, far: Floats) -> Floats:
+    """By what power of four the top must grow until the slope of ``log M`` passes the farthest strike, (2 S, 1)."""
+    powers = 4.0 ** np.arange(_QUADRUPLINGS + 1)
+    x = 1.0 / (scale / (top * powers) + 1.0 / room)
+    log_m = _by_side(model, tau, x)
+    slope = np.diff(log_m, axis=1) / np.maximum(np.diff(x, axis=1), 1e-300)
+    enough = slope >= far[:, None]
+    at = np.where(enough.any(axis=1), np.minimum(np.argmax(enough, axis=1) + 2, _QUADRUPLINGS), _QUADRUPLINGS)
+    return np.asarray(powers[at][:, None])

@@ -66,19 +66,20 @@ class _Cover:
     high: Floats
 
 
-def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, power: int, rounding: float = ROUNDING) -> Plan:
+def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, power: int) -> Plan:
     """Plan a batch. ``model`` stacked over slices, ``tau`` (S, 1), relative ``tolerance`` of out-of-the-money values.
 
-    ``power``: the least decay of the kernels wanted; ``rounding``: units of rounding a row is assumed to lose.
+    ``power``: the least decay of the kernels wanted.
     """
     count = tau.shape[0]
-    moments = side_moments(model, tau, np.maximum(reach.far[:count], reach.far[count:]))
+    moments = side_moments(model, tau, reach)
     used = reach.far >= 0.0
     sides = np.arange(2 * count)
     log_far = np.where(used, moments.log_value(sides, np.where(used, reach.far, 0.0)), np.inf)
-    single = np.minimum(log_far[:count], log_far[count:]) > np.log(rounding * EPS / tolerance)
+    symmetric = log_far - 0.5 * np.maximum(reach.far, 0.0)  # what stands against the sum at p = 1/2
+    single = np.minimum(symmetric[:count], symmetric[count:]) > np.log(ROUNDING * EPS / tolerance)
     wing = used & ~np.concatenate([single, single])
-    allowed = float(np.clip(np.log(tolerance / (rounding * EPS)), 0.5, 9.0))
+    allowed = float(np.clip(np.log(tolerance / (ROUNDING * EPS)), 0.5, 9.0))
     cover = _cover(moments, sides[wing], reach.near[wing], reach.far[wing], allowed)
     alone = np.flatnonzero(single)
     slice_of = np.concatenate([alone, cover.side % count])
@@ -101,7 +102,7 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
         cuts[cover.side[later], cover.ordinal[later] - 1] = cover.high[later]
     smallest = _smallest_scaled(moments, slice_of, exponent, k_low, k_high, count)
     log_target = smallest + np.log(tolerance * SHARE)
-    period = _period(moments, slice_of, exponent, k_low, k_high, log_target, smallest, tolerance, power, rounding)
+    period = _period(moments, slice_of, exponent, k_low, k_high, log_target, smallest, tolerance, power)
     scale = np.sqrt(model.mean_variance(tau)).reshape(-1)[slice_of]
     cut = _cutoff(model.take(slice_of), tau[slice_of], exponent, scale, log_target, power)
     with np.errstate(invalid="ignore", over="ignore"):
@@ -188,7 +189,6 @@ def _period(
     smallest: Floats,
     tolerance: float,
     power: int,
-    rounding: float,
 ) -> Floats:
     """Smallest ``L`` for which some moment order bounds the aliases on either side by the target."""
     count = moments.x.shape[0] // 2
@@ -208,14 +208,12 @@ def _period(
     log_value = smallest - (exponent - 1.0) * k_far
     log_value = np.where(exponent < 0.0, log_value - k_far, log_value)
     with np.errstate(divide="ignore", invalid="ignore"):
-        exact = (np.log(0.25 * rounding * EPS / tolerance) - log_value) / x_own
+        exact = (np.log(0.25 * ROUNDING * EPS / tolerance) - log_value) / x_own
     exact = np.where(exponent == 0.5, 0.0, exact)
     return np.maximum(np.maximum(sides[0], sides[1]), np.maximum(exact, 0.0))
 
 
-def _cutoff(
-    model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, power: int
-) -> Floats:
+def _cutoff(model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, power: int) -> Floats:
     """Smallest ``U`` (to a few per cent) beyond which the envelope weighs less than the target; inf if none is near."""
     u = (3.0 / scale)[:, None] * _STEP ** np.arange(_STEPS)
     level = model.log_envelope(exponent[:, None], u, tau) + (1 - power) * np.log(u)

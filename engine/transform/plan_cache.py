@@ -31,7 +31,9 @@ _hits = 0
 _misses = 0
 
 
-def rows_of(model: Any, tau: Floats, reach: Reach, settings: tuple[Any, ...], fresh: Callable[[Ints | None], Rows]) -> Rows:
+def rows_of(
+    model: Any, tau: Floats, reach: Reach, settings: tuple[Any, ...], fresh: Callable[[Ints | None], Rows]
+) -> Rows:
     """Rows of all slices: kept ones where the inputs are the same, ``fresh(members)`` for the others."""
     count = tau.shape[0]
     if count > MOST_SLICES:

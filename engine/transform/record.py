@@ -32,16 +32,18 @@ def assemble(
     k: Floats,
     shifted: Floats,
     aliases: Floats,
+    alias_size: Floats,
 ) -> RowValues:
     """Put the strike factor back: ``value = exp(log_scale + shifted) total - aliases`` with its bound.
 
     ``total``: the sum in units of ``exp(log_scale)``; ``rounding``: its rounding error in the same units; ``slope``: the
     change of ``total`` per unit of ``k``, which the rounding of ``k`` itself excites; ``pieces``: the discretisation and
-    truncation bound before the strike factor ``exp(shifted)``, ``shifted = (shift - p) k``.
+    truncation bound, in the same units; ``shifted = (shift - p) k`` is the log of the strike factor; ``aliases`` are subtracted, known to
+    ``alias_size`` units.
     """
     scale = np.exp(log_scale + shifted)
     value = scale * total - aliases
     exponent_error = np.abs(log_scale) + np.abs(shifted) + 2.0
     units = rounding + EPS * (exponent_error * np.abs(total) + np.abs(k) * slope)
-    bound = scale * units + np.exp(shifted) * pieces + EPS * (4.0 * np.abs(aliases) + np.abs(value)) + _SMALLEST
+    bound = scale * (units + pieces) + EPS * (alias_size + np.abs(value)) + _SMALLEST
     return RowValues(value, bound)

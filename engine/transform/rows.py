@@ -47,7 +47,9 @@ class Rows:
     @property
     def stored(self) -> int:
         """Numbers held in the grids and terms: what a cache counts."""
-        return int(self.grid.size + sum(2 * part.psi.size + 2 * part.iz.size for parts in self.bent.values() for part in parts))
+        return int(
+            self.grid.size + sum(2 * part.psi.size + 2 * part.iz.size for parts in self.bent.values() for part in parts)
+        )
 
 
 def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Rows:
