@@ -15,7 +15,10 @@ import numpy as np
 from hypothesis import strategies as st
 from hypothesis.strategies import SearchStrategy
 
-__all__ = ["DIMENSIONS", "expiry", "parameters", "unit_cube"]
+from engine import MODELS
+from tests.reference.mp_models import reference_model
+
+__all__ = ["DIMENSIONS", "expiry", "pair", "unit_cube"]
 
 HOUR = 1.0 / (365.0 * 24.0)
 
@@ -58,11 +61,12 @@ _MAKERS: dict[str, tuple[int, Callable[[Sequence[float]], dict[str, Any]]]] = {
 DIMENSIONS = {name: size for name, (size, _) in _MAKERS.items()}
 
 
-def parameters(name: str, u: Sequence[float]) -> dict[str, Any]:
-    """Parameters of the model ``name`` by their public names; ``u`` has ``DIMENSIONS[name]`` numbers in [0, 1]."""
+def pair(name: str, u: Sequence[float]) -> tuple[Any, Any]:
+    """The engine's model ``name`` and its reference twin; ``u`` has ``DIMENSIONS[name]`` numbers in [0, 1]."""
     size, make = _MAKERS[name]
     assert len(u) == size
-    return make(u)
+    values = make(u)
+    return MODELS[name](**values), reference_model(name, values)
 
 
 def unit_cube(size: int) -> SearchStrategy[list[float]]:

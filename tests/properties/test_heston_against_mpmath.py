@@ -21,10 +21,8 @@ import numpy as np
 import pytest
 from hypothesis import assume, given, settings
 
-from engine.models.heston import Heston
-from tests.properties.parameter_sets import DIMENSIONS, expiry, parameters, unit_cube
+from tests.properties.parameter_sets import DIMENSIONS, expiry, pair, unit_cube
 from tests.properties.verdict import Verdict, judge
-from tests.reference.mp_models import Heston as HestonReference
 
 QUICK_SETS = 200
 LONG_SETS = 5000
@@ -34,9 +32,8 @@ COORDINATES = DIMENSIONS["heston"] + 5
 
 def _judge_one(u: Sequence[float]) -> Verdict:
     """One set: the default tolerance with the relative demand, then a drawn one for the bound alone."""
-    values = parameters("heston", u[:-5])
+    model, twin = pair("heston", u[:-5])
     tau, inner, near = expiry(u[-5]), 6.0 * u[-4], u[-3]
-    model, twin = Heston(**values), HestonReference(**values)
     if not float(model.mean_variance(tau)) > 0.0:
         return Verdict()  # no randomness at all: nothing to transform
     out = judge(model, twin, tau, [-6.0, -inner, -near, 0.0, near, inner, 6.0], tolerance=1e-10, relative=1e-9)

@@ -29,6 +29,7 @@ from gmpy2 import mpc, mpfr
 __all__ = [
     "NotReached",
     "digital",
+    "log_moments",
     "log_strike",
     "moment_strip",
     "otm_digitals",
@@ -134,6 +135,38 @@ def moment_strip(model: Any, tau: float, *, digits: int = 30) -> tuple[Any, Any]
     """The open interval of finite moments."""
     with _precise(_bits(model, tau, digits)):
         return model.prepare(tau).edges()
+
+
+def log_moments(model: Any, tau: Any, p: Any, heights: Sequence[float], *, digits: int = 25) -> list[Any]:
+    """``log M(p + i u)`` at increasing ``u >= 0``, continued from the real axis.
+
+    From each height to the next the number of steps is doubled until it no longer matters, twice in a row.
+    """
+    with _precise(_bits(model, tau, digits)):
+        at = model.prepare(tau)
+        p = mpfr(p)
+        value, state = at.log_moment(mpc(p), None)
+        below, out = mpfr(0), []
+        for u in heights:
+            if u > 0:
+                value, state = _climb(at, p, below, mpfr(u), state)
+                below = mpfr(u)
+            out.append(value)
+        return out
+
+
+def _climb(at: Any, p: Any, below: Any, above: Any, state: Any) -> tuple[Any, Any]:
+    last, agreed, steps = None, 0, 2
+    while agreed < 2:
+        near = state
+        for j in range(1, steps + 1):
+            value, near = at.log_moment(mpc(p, below + (above - below) * j / steps), near)
+        agreed = agreed + 1 if last is not None and abs(value - last) < mpfr("1e-20") * (1 + abs(value)) else 0
+        last = value
+        steps *= 2
+        if steps > NODES:
+            raise NotReached("the path of the logarithm does not settle")
+    return last, near
 
 
 def sensitivity(price: Callable[[Any], Any], at: Any, *, digits: int = 25, step: str = "1e-10", order: int = 1) -> Any:
