@@ -27,4 +27,5 @@ __all__ = [
     "price_smiles",
 ]
 
-MODELS: dict[str, type[Model]] = {kind.name: kind for kind in (Black, Heston)}
+_KINDS: tuple[type[Model], ...] = (Black, Heston)
+MODELS: dict[str, type[Model]] = {kind.name: kind for kind in _KINDS}

@@ -7,8 +7,9 @@ argument of the characteristic function of ``X = ln(S_T / F)``, ``p`` a real mom
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import ClassVar, Protocol, Self, Sequence
+from typing import ClassVar, Protocol, Self
 
 from engine.arrays import Complexes, Floats, Ints
 
@@ -43,8 +44,8 @@ class ParameterSpec:
 
 @dataclass(frozen=True, slots=True)
 class CfGradient:
-    """``log phi``, the cap on its rounding error in units of machine epsilon, its derivatives by every parameter and, last,
-    by ``tau`` (P + 1, ...), and the caps on theirs."""
+    """``log phi``, the cap on its rounding error in units of machine epsilon, its derivatives by every parameter and,
+    last, by ``tau`` (P + 1, ...), and the caps on theirs."""
 
     log_value: Complexes
     size: Floats
@@ -84,15 +85,17 @@ class Model(Protocol):
         ...
 
     def log_cf_gradient(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> CfGradient:
-        """``log_cf_sized`` with the derivatives by the parameters, in the order of ``sensitivity_names``, and by ``tau``."""
+        """``log_cf_sized`` with the derivatives by the parameters, in the order of ``sensitivity_names``, and by
+        ``tau``."""
         ...
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)]`` for real ``p`` inside the strip."""
         ...
 
-    def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
-        """``(p_lo, p_hi)``: inner approximations of the open interval of finite moments (may be -inf, inf)."""
+    def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
+        """``(p_lo, p_hi)``: inner approximations of the open interval of finite moments (may be -inf, inf), to
+        1e-3 of the distance from 0 or 1, which is all a plan needs, or to rounding if ``precise``."""
         ...
 
     def log_envelope(self, p: Floats, u: Floats, tau: Floats | float) -> Floats:

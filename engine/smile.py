@@ -1,15 +1,16 @@
 """Model x transform x Black: whole smiles. The composer that everything above calls.
 
-A slice is one expiry: forward, discount factor, strikes in any order with repeats, a payoff per strike. Out-of-the-money
-values come from the transform (or, for Black's model, from Black's formula); in-the-money ones follow by put-call
-parity, which therefore holds exactly; digital prices come from the same contours. Implied volatilities are always
-those of the out-of-the-money vanilla at the strike, digitals included.
+A slice is one expiry: forward, discount factor, strikes in any order with repeats, a payoff per strike.
+Out-of-the-money values come from the transform (or, for Black's model, from Black's formula); in-the-money ones
+follow by put-call parity, which therefore holds exactly; digital prices come from the same contours. Implied
+volatilities are always those of the out-of-the-money vanilla at the strike, digitals included.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, Sequence
+from typing import Any
 
 import numpy as np
 from scipy.special import ndtr
@@ -35,8 +36,8 @@ _EPS = float(np.finfo(np.float64).eps)
 
 @dataclass(frozen=True, slots=True)
 class TransformReport:
-    """How a slice was priced: ``method`` (``closed_form``, ``contour_fft``, ``deformed_contour`` or the last two joined by
-    ``+``), the exponents ``p`` of its rows, and the nodes in all."""
+    """How a slice was priced: ``method`` (``closed_form``, ``contour_fft``, ``deformed_contour`` or the last two
+    joined by ``+``), the exponents ``p`` of its rows, and the nodes in all."""
 
     method: str
     exponents: tuple[float, ...]
@@ -77,8 +78,8 @@ def price_smiles(
 ) -> list[PricedSlice]:
     """Price whole smiles, one model for all slices or one per slice, in one batch.
 
-    ``tolerance`` is relative to the out-of-the-money value, within ``TOLERANCE_RANGE``. Accuracy: the stated bound covers
-    the error. Raises InputError (argument, index, allowed range) for inputs outside the admissible ranges, and
+    ``tolerance`` is relative to the out-of-the-money value, within ``TOLERANCE_RANGE``. Accuracy: the stated bound
+    covers the error. Raises InputError (argument, index, allowed range) for inputs outside the admissible ranges, and
     RefusedError when the batch would need more than ``node_limit`` transform nodes.
     """
     if not TOLERANCE_RANGE[0] <= tolerance <= TOLERANCE_RANGE[1]:
@@ -142,7 +143,8 @@ def _report(contour: Contour) -> TransformReport:
 
 
 def _closed_form(kernels: list[Kernel], k: Floats, s: Floats) -> tuple[Floats, Floats]:
-    """Black's formula and its rounding bound: the value's condition in ``k`` and ``s`` times a few units. (K, n) each."""
+    """Black's formula and its rounding bound: the value's condition in ``k`` and ``s`` times a few units. (K, n)
+    each."""
     with np.errstate(divide="ignore", invalid="ignore"):
         d = -np.abs(k) / s
         d2 = np.where(s > 0.0, d - 0.5 * np.sign(k + (k == 0.0)) * s, -np.inf)

@@ -8,8 +8,9 @@ Source: F. Black, "The pricing of commodity contracts", Journal of Financial Eco
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, ClassVar, Self, Sequence
+from typing import Any, ClassVar, Self
 
 import numpy as np
 
@@ -63,7 +64,7 @@ class Black:
         """``log |phi(u - i p)|`` exactly."""
         return np.asarray(0.5 * self.mean_variance(tau) * (p * (p - 1.0) - u * u))
 
-    def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
+    def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
         """All moments exist: ``(-inf, inf)``."""
         shape = np.broadcast_shapes(np.shape(self.volatility), np.shape(tau))
         return np.full(shape, -np.inf), np.full(shape, np.inf)

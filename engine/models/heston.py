@@ -2,7 +2,8 @@
 
 Problem: ``log E[exp(i z X)]`` of ``X = ln(S_T / F)`` for complex ``z``, for every parameter in the box, ``sigma -> 0``
 and ``v0 = 0`` included. The exponent is that of ``engine.models.variance_factor`` with ``w = i z``:
-``q = w^2 - w``, ``b = kappa - rho sigma w``, ``D^2 = kappa^2 + w (sigma (sigma - 2 kappa rho) - sigma^2 (1 - rho^2) w)``.
+``q = w^2 - w``, ``b = kappa - rho sigma w``, ``D^2 = kappa^2 + w (sigma (sigma - 2 kappa rho) - sigma^2 (1 - rho^2)
+w)``.
 
 Envelope (our derivation). Conditional on the path of the variance, ``X`` is Gaussian with variance
 ``(1 - rho^2) I``, ``I = integral of v``; hence ``|phi(u - i p)| <= E[exp(p X) exp(-(1 - rho^2) u^2 I / 2)]``, which
@@ -15,14 +16,16 @@ currency options", Review of Financial Studies 6(2), 1993.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, fields
-from typing import Any, ClassVar, Self, Sequence
+from typing import Any, ClassVar, Self
 
 import numpy as np
 
 from engine.arrays import Complexes, Floats, Ints
+from engine.models.explosion import explosion_edges
 from engine.models.parameters import check_parameters, stack_columns, take_rows
-from engine.models.variance_factor import FactorExponent, explosion_edges, factor_exponent
+from engine.models.variance_factor import FactorExponent, factor_exponent
 from engine.protocols import ParameterSpec
 
 __all__ = ["HESTON_PARAMETERS", "Heston"]
@@ -125,9 +128,9 @@ class Heston:
         )
         return np.asarray(exponent.log_value.real)
 
-    def strip(self, tau: Floats | float) -> tuple[Floats, Floats]:
+    def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
         """``(p_lo, p_hi)`` by the closed explosion time, from inside; infinite where no moment explodes."""
-        return explosion_edges(kappa=self.kappa, sigma=self.sigma, rho=self.rho, tau=tau)
+        return explosion_edges(kappa=self.kappa, sigma=self.sigma, rho=self.rho, tau=tau, precise=precise)
 
     def mean_variance(self, tau: Floats | float) -> Floats:
         """``E[integral of v over tau] = theta tau + (v0 - theta) (1 - exp(-kappa tau)) / kappa``, both parts >= 0."""

@@ -1,6 +1,7 @@
 """What a straight contour leaves out, bounded: tails among the aliases and the nodes beyond the last one.
 
-Both before the strike factor ``exp((shift - p) k)`` and in units of ``exp(log_scale)``, ``log_scale = log M(p)``, per row.
+Both before the strike factor ``exp((shift - p) k)`` and in units of ``exp(log_scale)``, ``log_scale = log M(p)``, per
+row.
 
 Tails. A vanilla or a digital obeys Markov's inequality, ``W(k) <= c(x) M(p') exp((shift - p') k)`` with ``c = 1`` for
 digitals, so the aliases to the right are at most, for any ``p' = 1 + x > p``,
@@ -8,13 +9,14 @@ digitals, so the aliases to the right are at most, for any ``p' = 1 + x > p``,
     c(x) M(p') exp(-(p' - p) (k_low + L)) / (1 - exp(-(p' - p) L))
 
 and to the left the mirror image. A density or a derivative by a parameter has no such inequality, but shifting its
-contour gives ``|W(k)| <= exp((shift - p') k) I(p')`` with ``I(p') = 1/pi int |psi(u - i p')| du``, which takes the place of
-``c M``. ``I`` is summed on a geometric mesh by the larger end of each cell and doubled: conservative, not proven.
+contour gives ``|W(k)| <= exp((shift - p') k) I(p')`` with ``I(p') = 1/pi int |psi(u - i p')| du``, which takes the
+place of ``c M``. ``I`` is summed on a geometric mesh by the larger end of each cell and doubled: conservative, not
+proven.
 
 Truncation. ``1/pi int_U^inf G(u) u^-power du`` with the model's non-increasing envelope ``G >= |phi|``, by steps on a
 geometric mesh; the omitted terms of a trapezoidal sum of non-increasing terms lie below the integral from the last
-node. Past the mesh the last ratio is continued, since envelopes steepen in log-log. Derivatives by parameters are taken to
-grow at most like ``(u / U)^GROWTH`` from twice their modulus at the last node: conservative, not proven.
+node. Past the mesh the last ratio is continued, since envelopes steepen in log-log. Derivatives by parameters are
+taken to grow at most like ``(u / U)^GROWTH`` from twice their modulus at the last node: conservative, not proven.
 """
 
 from __future__ import annotations

@@ -1,17 +1,17 @@
 """Hard rows: the contour is bent into the sector where the integrand decays, and a hundred or so nodes suffice.
 
-``z(y) = i w1 + b sinh(i w + y)`` crosses the imaginary axis at ``-i p`` (``w1 + b sin w = -p``) and leaves along rays of
-angle ``w``. The characteristic functions served here are analytic off the imaginary axis (Lucic 2007 for Heston), so
+``z(y) = i w1 + b sinh(i w + y)`` crosses the imaginary axis at ``-i p`` (``w1 + b sin w = -p``) and leaves along rays
+of angle ``w``. The characteristic functions served here are analytic off the imaginary axis (Lucic 2007 for Heston), so
 the contour may be bent freely in the right half plane while it crosses the axis between the same singularities. It is
 bent down (``w < 0``) for strikes above ``k_inf``, up for those below, where ``phi(z) ~ exp(i z k_inf)`` far out.
 
     V(k) = (1/pi) Re int_0^inf exp((shift - i z) k) phi(z) factor(i z) z'(y) dy
 
 Trapezoidal rule with step ``h``; its error for a function analytic in ``|Im y| < d`` is at most
-``(H+ + H-) / (exp(2 pi d / h) - 1)`` with ``H+-`` the integrals of the modulus along ``Im y = +-d`` (Trefethen and Weideman
-2014, theorem 5.1). ``H+-`` are themselves computed by quadrature and doubled; the tail beyond the last node is the
-geometric continuation of its last terms, doubled: conservative rather than proven, and said so. Moduli are log-convex
-in ``k``, so their largest value over a row's strikes is taken at its two ends.
+``(H+ + H-) / (exp(2 pi d / h) - 1)`` with ``H+-`` the integrals of the modulus along ``Im y = +-d`` (Trefethen and
+Weideman 2014, theorem 5.1). ``H+-`` are themselves computed by quadrature and doubled; the tail beyond the last node
+is the geometric continuation of its last terms, doubled: conservative rather than proven, and said so. Moduli are
+log-convex in ``k``, so their largest value over a row's strikes is taken at its two ends.
 
 Source: S. Boyarchenko and S. Levendorskii, "Sinh-acceleration: efficient evaluation of probability distributions,
 option pricing, and Monte Carlo simulations", IJTAF 22(3), 2019; V. Lucic, "On singularities in the Heston model", 2007
@@ -44,8 +44,8 @@ _STRIKE_BLOCK = 256
 @dataclass(frozen=True, slots=True)
 class BentSum:
     """One bent contour, for the strikes on one side of ``k_inf``: arguments ``i z`` (N,), terms ``psi`` (K, N) at the
-    strike ``k_near`` nearest to ``k_inf``, where they are largest, in units of ``exp(log_scale)``, and per kernel (K,) what
-    a bound needs."""
+    strike ``k_near`` nearest to ``k_inf``, where they are largest, in units of ``exp(log_scale)``, and per kernel
+    (K,) what a bound needs."""
 
     k_inf: float
     k_near: float
@@ -184,8 +184,8 @@ def _bent_sum(
     h = 2.0 * np.pi * bend.d / decades
     stop = bend.stop if np.isfinite(bend.stop) else _LONG
     count = min(int(np.ceil(stop / h)) + 2, _MOST_NODES)
-    h = max(h, stop / (count - 2))
-    z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count))
+    h = float(max(h, stop / (count - 2)))
+    z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count, dtype=np.float64))
     gradient: Any = None
     gradient_size: Any = None
     if any(kernel.parameter is not None for kernel in kernels):

@@ -1,10 +1,10 @@
 """The transform's face: a batch of slices in, out-of-the-money values with bounds out.
 
 A batch goes through in chunks of slices: plan, rows, strikes. Every row's raw value is turned into the value of the
-out-of-the-money side (calls for ``k >= 0``, puts for ``k < 0``) per unit forward. Vanillas and digitals are projected onto the
-interval where the truth lies, ``[0, min(1, e^k)]`` and ``[0, 1]``, which never increases the error. Where a bound misses the
-tolerance (the plan's estimates of the values were too high), the slice is planned once more, tighter by what was missing, and the
-better of both is kept.
+out-of-the-money side (calls for ``k >= 0``, puts for ``k < 0``) per unit forward. Vanillas and digitals are projected
+onto the interval where the truth lies, ``[0, min(1, e^k)]`` and ``[0, 1]``, which never increases the error. Where a
+bound misses the tolerance (the plan's estimates of the values were too high), the slice is planned once more, tighter
+by what was missing, and the better of both is kept.
 """
 
 from __future__ import annotations
@@ -29,7 +29,7 @@ __all__ = ["Contour", "Inversion", "invert"]
 
 _CHUNK = 64  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
 _HARD_NODES = 4096  # what a bent row is counted as against the node limit: its probes and its sum
-_REPAIRS = 2
+_MOST_APART = 64  # missed strikes that are then planned one by one
 _TIGHTEST = 2.0**-16  # of the tolerance, for the second plan
 
 
@@ -56,11 +56,10 @@ def invert(
 ) -> Inversion:
     """Out-of-the-money values of a batch, for each kernel; the first one must be the vanilla.
 
-    ``model`` stacked over S slices, ``tau`` (S, 1) years, ``strikes`` ragged; ``tolerance`` relative to each vanilla value.
-    The bound covers the error for every input in the models' parameter boxes; where double precision cannot hold
+    ``model`` stacked over S slices, ``tau`` (S, 1) years, ``strikes`` ragged; ``tolerance`` relative to each vanilla
+    value. The bound covers the error for every input in the models' parameter boxes; where double precision cannot hold
     the tolerance the bound says so. Raises RefusedError when the plans need more than ``limit`` nodes.
     """
-    count = tau.shape[0]
     n = strikes.k.shape[0]
     value, bound = np.empty((len(kernels), n)), np.empty((len(kernels), n))
     contours: list[Contour] = []
@@ -84,24 +83,28 @@ def _by_chunks(
         rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, left)
         value[:, lo:hi], bound[:, lo:hi] = _at_strikes(rows, part, kernels)
         contours.extend(_contours(rows))
-        for _ in range(_REPAIRS):
+        for apart in (False, True):
             missed = np.flatnonzero((bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (value[0, lo:hi] > 1e-290))
-            if missed.shape[0] == 0:
+            if missed.shape[0] == 0 or (apart and missed.shape[0] > _MOST_APART):
                 break
-            left = _improve(sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, left)
+            left = _improve(sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, left, apart)
 
 
 def _improve(
     model: Model, tau: Floats, strikes: Strikes, missed: Ints, lo: int, tolerance: float, kernels: list[Kernel],
-    value: Floats, bound: Floats, limit: int,
+    value: Floats, bound: Floats, limit: int, apart: bool,
 ) -> int:  # fmt: skip
-    """Plan the missed strikes for the tolerance that would have been met, and keep what is better."""
+    """Plan the missed strikes, or each of them by itself, for the tolerance that would have been met; keep the
+    better."""
     at = lo + missed
     short = float(np.min(value[0, at] / bound[0, at])) * tolerance
     tighter = tolerance * float(np.exp2(np.floor(np.log2(np.clip(short, _TIGHTEST, 0.5)))))
-    members, slice_of = np.unique(strikes.slice_of[missed], return_inverse=True)
+    if apart:
+        members, slice_of = strikes.slice_of[missed], np.arange(missed.shape[0])
+    else:
+        members, slice_of = np.unique(strikes.slice_of[missed], return_inverse=True)
     again = Strikes(strikes.k[missed], slice_of, np.searchsorted(slice_of, np.arange(members.shape[0])))
-    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit)
+    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit, rounded=False)
     new_value, new_bound = _at_strikes(rows, again, kernels)
     better = new_bound < bound[:, at]
     value[:, at] = np.where(better, new_value, value[:, at])
@@ -110,17 +113,17 @@ def _improve(
 
 
 def _prepared(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int
-) -> tuple[Rows, int]:
+    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int,
+    *, rounded: bool = True,
+) -> tuple[Rows, int]:  # fmt: skip
     """Rows of a chunk, from the cache where all inputs are the same, and what is left of the node limit."""
-    reach = reach_of(strikes, np.sqrt(model.mean_variance(tau)).reshape(-1))
+    reach = reach_of(strikes, np.sqrt(model.mean_variance(tau)).reshape(-1), rounded=rounded)
     power = min(kernel.power for kernel in kernels)
 
     def fresh(members: Ints | None) -> Rows:
-        some = members is not None
-        sub, sub_tau, sub_reach = (
-            (model.take(members), tau[members], reach.take(members)) if some else (model, tau, reach)
-        )
+        sub, sub_tau, sub_reach = model, tau, reach
+        if members is not None:
+            sub, sub_tau, sub_reach = model.take(members), tau[members], reach.take(members)
         plan = plan_rows(sub, sub_tau, sub_reach, tolerance=tolerance, power=power)
         wanted = _counted(plan)
         if wanted > limit:
@@ -191,7 +194,8 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
 
 
 def out_of_the_money(kernel: Kernel, raw: RowValues, exponent: Floats, k: Floats, growth: Floats) -> RowValues:
-    """Raw values to those of the out-of-the-money side: direct or by the complement where the row is on the other one."""
+    """Raw values to those of the out-of-the-money side: direct or by the complement where the row is on the other
+    one."""
     if not kernel.markov:
         lost = np.isnan(raw.value) | np.isnan(raw.bound)
         return RowValues(np.where(lost, 0.0, raw.value), np.where(lost, np.inf, raw.bound)) if lost.any() else raw

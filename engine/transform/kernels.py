@@ -1,7 +1,7 @@
 """Kernels: what multiplies the characteristic function, and what is known about the sum that results.
 
-With ``z = u - i p`` (so ``i z = p + i u``) a row computes ``W(k) = exp((shift - p) k) / pi * Re sum h exp(-i u k) psi(u)``,
-``psi = phi(z) factor(i z)``, or ``psi = phi(z) factor(i z) d log phi / d parameter``:
+With ``z = u - i p`` (so ``i z = p + i u``) a row computes ``W(k) = exp((shift - p) k) / pi * Re sum h exp(-i u k)
+psi(u)``, ``psi = phi(z) factor(i z)``, or ``psi = phi(z) factor(i z) d log phi / d parameter``:
 
     kernel         shift  factor             W for p > 1        0 < p < 1              p < 0
     vanilla          1    1/(iz (iz - 1))    call               -E[min(e^X, e^k)]      put
@@ -14,8 +14,8 @@ all per unit forward and undiscounted (Lewis 2001; Lee 2004). The share digital 
 gamma: with ``C = F c(ln K/F)``, ``dC/dF = E[e^X; X > k]`` and ``F d2C/dF2 = e^k f(k)``. A kernel with a parameter
 differentiates under the integral; ``d log phi`` vanishes at ``i z = 0`` and ``1``, so its poles are removable.
 
-Aliases, by Poisson summation: the trapezoidal sum with period ``L`` is ``sum_m exp((p - shift) L m) W(k + m L)``. Far on
-the in-the-money side a vanilla is its intrinsic value and a digital is 1, plus a tail; those parts are geometric
+Aliases, by Poisson summation: the trapezoidal sum with period ``L`` is ``sum_m exp((p - shift) L m) W(k + m L)``. Far
+on the in-the-money side a vanilla is its intrinsic value and a digital is 1, plus a tail; those parts are geometric
 series, ``exact_aliases``. What is left are tails (``engine.transform.bounds``).
 """
 

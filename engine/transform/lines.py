@@ -1,9 +1,9 @@
 """Rows on straight contours: characteristic function at the nodes, every kernel through one FFT.
 
-``W(k) = exp((shift - p) k) (h / pi) Re sum' psi_j exp(-i u_j k) - exact aliases``, ``h = 2 pi / L``. The result of the FFT, a real
-grid over one period, is what strikes are later summed from (``engine.transform.window``). Rounding: every ``psi_j`` carries
-``(size_j + 8) eps`` relative and, with a derivative, the derivative's own; the window adds its error. ``phi`` is
-scaled by its value at ``u = 0``, so that no exponent leaves the double range.
+``W(k) = exp((shift - p) k) (h / pi) Re sum' psi_j exp(-i u_j k) - exact aliases``, ``h = 2 pi / L``. The result of
+the FFT, a real grid over one period, is what strikes are later summed from (``engine.transform.window``). Rounding:
+every ``psi_j`` carries ``(size_j + 8) eps`` relative and, with a derivative, the derivative's own; the window adds
+its error. ``phi`` is scaled by its value at ``u = 0``, so that no exponent leaves the double range.
 """
 
 from __future__ import annotations
@@ -26,8 +26,8 @@ __all__ = ["LineSums", "line_sums"]
 
 @dataclass(frozen=True, slots=True)
 class LineSums:
-    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding``, ``slope`` (change per unit of ``k``) and ``pieces``
-    (aliasing and truncation bound before the strike factor) in the same units; (K, r) each."""
+    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding``, ``slope`` (change per unit of ``k``)
+    and ``pieces`` (aliasing and truncation bound before the strike factor) in the same units; (K, r) each."""
 
     grid: Floats
     log_scale: Floats

@@ -24,7 +24,7 @@ from engine.transform.reach import Reach
 __all__ = ["SideMoments", "side_moments"]
 
 POINTS = 64
-_LOWEST = 0.15  # of 1/s: below it the pole at x = 0 dominates every strike
+_LOWEST = 0.15  # of 1/s, or of the way to the edge of a narrow strip: below it the pole at x = 0 dominates
 _QUADRUPLINGS = 16
 _HIGHEST = 40.0  # of 1/s, at least: Gaussian aliases at exp(-40^2/2) underflow any double
 
@@ -86,7 +86,8 @@ def side_moments(model: Model, tau: Floats, reach: Reach) -> SideMoments:
 
 def _grid(model: Model, tau: Floats, scale: Floats, room: Floats, top: Floats) -> tuple[Floats, Floats]:
     """Grids ``x`` and ``log M`` there, (2 S, POINTS): geometric up to ``top / scale``, crowding towards the edges."""
-    g = np.exp(np.log(_LOWEST) + np.linspace(0.0, 1.0, POINTS) * np.log(top / _LOWEST)) / scale
+    lowest = _LOWEST * np.minimum(1.0, room * scale)
+    g = np.exp(np.log(lowest) + np.linspace(0.0, 1.0, POINTS) * np.log(top / lowest)) / scale
     x = 1.0 / (1.0 / g + 1.0 / room)
     return x, _by_side(model, tau, x)
 

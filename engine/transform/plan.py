@@ -1,8 +1,10 @@
 """From a tolerance to rows: which exponents, which period, how many nodes. Nothing here is chosen by a user.
 
-A *row* is one contour ``z = u - i p`` of one slice and the strikes it serves. The plan picks, for a whole batch at once,
+A *row* is one contour ``z = u - i p`` of one slice and the strikes it serves. The plan picks, for a whole batch at
+once,
 
-1. one row at ``p = 1/2`` where every strike of a slice is worth more than rounding allows it to lose; otherwise rows
+1. one row at ``p = 1/2`` where every strike of a slice, or of a side, is worth more than rounding can lose; otherwise
+rows
    with ``p > 1`` for calls and ``p < 0`` for puts, the fewest for which no strike is more than ``loss`` units in the
    exponent above its own saddle (``loss`` follows from tolerance / rounding);
 2. the period ``L`` of each row from Markov bounds on the aliases left after the closed-form correction, minimised over
@@ -32,7 +34,7 @@ EPS = float(np.finfo(np.float64).eps)
 PLAIN_LIMIT = 4096
 SHARE = 0.02  # of the tolerance, for each of aliasing and truncation: leaves room for a value estimate off by 10
 ROUNDING = 200.0  # rounding units a row is assumed to lose at first; the reported bound uses the sums themselves
-MOST_ROWS = 12  # per side
+MOST_ROWS = 16  # per side
 _EASY = 0.6  # of the loss allowed: within it, cost decides
 _LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 9, 10, 11, 12, 14)}))
 _STEP = 1.3  # ratio of the search grid for U
@@ -77,16 +79,20 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
     sides = np.arange(2 * count)
     log_far = np.where(used, moments.log_value(sides, np.where(used, reach.far, 0.0)), np.inf)
     symmetric = log_far - 0.5 * np.maximum(reach.far, 0.0)  # what stands against the sum at p = 1/2
-    single = np.minimum(symmetric[:count], symmetric[count:]) > np.log(ROUNDING * EPS / tolerance)
-    wing = used & ~np.concatenate([single, single])
+    middle = symmetric > np.log(ROUNDING * EPS / tolerance)
+    single = middle[:count] & middle[count:]
+    both = np.concatenate([single, single])
+    wing = used & ~middle
     allowed = float(np.clip(np.log(tolerance / (ROUNDING * EPS)), 0.5, 9.0))
     cover = _cover(moments, sides[wing], reach.near[wing], reach.far[wing], allowed)
+    cover = _with_middle(cover, sides[used & middle & ~both], reach)
     alone = np.flatnonzero(single)
     slice_of = np.concatenate([alone, cover.side % count])
     order = np.lexsort((cover_key(alone.shape[0], cover), slice_of))
     x = moments.x[cover.side, cover.grid]
     put = cover.side >= count
-    exponent = np.concatenate([np.full(alone.shape, 0.5), np.where(put, -x, 1.0 + x)])[order]
+    of_cover = np.where(cover.grid < 0, 0.5, np.where(put, -x, 1.0 + x))
+    exponent = np.concatenate([np.full(alone.shape, 0.5), of_cover])[order]
     low, high = reach.interval()
     k_low = np.concatenate([low[alone], np.where(put, -cover.high, cover.low)])[order]
     k_high = np.concatenate([high[alone], np.where(put, -cover.low, cover.high)])[order]
@@ -115,6 +121,20 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
 def cover_key(alone: int, cover: _Cover) -> Ints:
     """Sorting key of rows inside a slice: by side, then by ordinal; a single row has key 0."""
     return np.concatenate([np.zeros(alone, dtype=np.int64), cover.side * MOST_ROWS + cover.ordinal])
+
+
+def _with_middle(cover: _Cover, sides: Ints, reach: Reach) -> _Cover:
+    """Sides that a row at ``p = 1/2`` serves while the other side of their slice needs more: ``grid`` is -1."""
+    if sides.shape[0] == 0:
+        return cover
+    zero = np.zeros_like(sides)
+    return _Cover(
+        np.concatenate([cover.side, sides]),
+        np.concatenate([cover.ordinal, zero]),
+        np.concatenate([cover.grid, zero - 1]),
+        np.concatenate([cover.low, reach.near[sides]]),
+        np.concatenate([cover.high, reach.far[sides]]),
+    )
 
 
 def _cover(moments: SideMoments, sides: Ints, near: Floats, far: Floats, allowed: float) -> _Cover:
@@ -163,7 +183,8 @@ def _lowest_covered(moments: SideMoments, side: Ints, grid: Ints, far: Floats, a
     loss = (ji - xi * strike) - (j0 - x * strike)
     fits = (loss <= allowed) & (strike < far[:, None])
     lowest = np.min(np.where(fits, strike, np.inf), axis=1)
-    return np.minimum(lowest, 0.9 * far)
+    next_one = np.max(np.where(strike < far[:, None], strike, -np.inf), axis=1)
+    return np.asarray(np.where(np.isfinite(lowest), lowest, next_one))
 
 
 def _smallest_scaled(
@@ -210,7 +231,7 @@ def _period(
     with np.errstate(divide="ignore", invalid="ignore"):
         exact = (np.log(0.25 * ROUNDING * EPS / tolerance) - log_value) / x_own
     exact = np.where(exponent == 0.5, 0.0, exact)
-    return np.maximum(np.maximum(sides[0], sides[1]), np.maximum(exact, 0.0))
+    return np.asarray(np.maximum(np.maximum(sides[0], sides[1]), np.maximum(exact, 0.0)))
 
 
 def _cutoff(model: Model, tau: Floats, exponent: Floats, scale: Floats, log_target: Floats, power: int) -> Floats:

@@ -1,8 +1,8 @@
 """Rows kept for the next request that asks for the same: bounded, by exact inputs, for small batches only.
 
-The key holds every input of a plan to the last bit: model class and parameters, expiry, rounded reach, tolerance, kernels. The
-reach is rounded to eighths of the scale (``engine.transform.reach``), so a forward that ticks mostly meets its old rows. What is kept
-are results of pure functions; a hit and a miss give the same numbers.
+The key holds every input of a plan to the last bit: model class and parameters, expiry, rounded reach, tolerance,
+kernels. The reach is rounded to eighths of the scale (``engine.transform.reach``), so a forward that ticks mostly
+meets its old rows. What is kept are results of pure functions; a hit and a miss give the same numbers.
 """
 
 from __future__ import annotations

@@ -32,7 +32,8 @@ class Strikes:
 
 @dataclass(frozen=True, slots=True)
 class Reach:
-    """``near <= |k| <= far`` of the strikes on each side, (2 S,): calls first, then puts; ``far < 0`` where there is none."""
+    """``near <= |k| <= far`` of the strikes on each side, (2 S,): calls first, then puts; ``far < 0`` where there is
+    none."""
 
     near: Floats
     far: Floats
@@ -51,15 +52,14 @@ class Reach:
         return low, high
 
 
-def reach_of(strikes: Strikes, scale: Floats) -> Reach:
-    """The reach of every side. ``scale`` (S,): standard deviation of ``X`` in each slice, > 0."""
+def reach_of(strikes: Strikes, scale: Floats, *, rounded: bool = True) -> Reach:
+    """The reach of every side, rounded outward or exact. ``scale`` (S,): standard deviation of ``X``, > 0."""
     kr = np.abs(strikes.k)
     call = strikes.k >= 0.0
-    cell = np.exp2(np.floor(np.log2(scale / _CELLS)))
-    near, far = [], []
-    for side in (call, ~call):
-        far.append(np.ceil(np.maximum.reduceat(np.where(side, kr, -np.inf), strikes.starts) / cell) * cell)
-        near.append(np.floor(np.minimum.reduceat(np.where(side, kr, np.inf), strikes.starts) / cell) * cell)
-    far_all, near_all = np.concatenate(far), np.concatenate(near)
+    far_all = np.concatenate([np.maximum.reduceat(np.where(c, kr, -np.inf), strikes.starts) for c in (call, ~call)])
+    near_all = np.concatenate([np.minimum.reduceat(np.where(c, kr, np.inf), strikes.starts) for c in (call, ~call)])
     used = far_all >= 0.0
+    if rounded:
+        cell = np.tile(np.exp2(np.floor(np.log2(scale / _CELLS))), 2)
+        far_all, near_all = np.ceil(far_all / cell) * cell, np.floor(near_all / cell) * cell
     return Reach(np.where(used, near_all, 0.0), np.where(used, far_all, -1.0))

@@ -36,10 +36,10 @@ def assemble(
 ) -> RowValues:
     """Put the strike factor back: ``value = exp(log_scale + shifted) total - aliases`` with its bound.
 
-    ``total``: the sum in units of ``exp(log_scale)``; ``rounding``: its rounding error in the same units; ``slope``: the
-    change of ``total`` per unit of ``k``, which the rounding of ``k`` itself excites; ``pieces``: the discretisation and
-    truncation bound, in the same units; ``shifted = (shift - p) k`` is the log of the strike factor; ``aliases`` are subtracted, known to
-    ``alias_size`` units.
+    ``total``: the sum in units of ``exp(log_scale)``; ``rounding``: its rounding error in the same units; ``slope``:
+    the change of ``total`` per unit of ``k``, which the rounding of ``k`` itself excites; ``pieces``: the
+    discretisation and truncation bound, in the same units; ``shifted = (shift - p) k`` is the log of the strike
+    factor; ``aliases`` are subtracted, known to ``alias_size`` units.
     """
     scale = np.exp(log_scale + shifted)
     value = scale * total - aliases

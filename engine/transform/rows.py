@@ -1,4 +1,5 @@
-"""Rows evaluated: all that strikes are summed from, ready for any strike within the plan's reach, and cuttable by slice.
+"""Rows evaluated: all that strikes are summed from, ready for any strike within the plan's reach, and cuttable by
+slice.
 
 Grids of all rows lie end to end in one buffer, so that strikes of every slice and row are summed by one window pass;
 bent rows keep their terms and are summed directly.
@@ -26,8 +27,8 @@ _MERGE = 1.6  # rows are given up to this many times the nodes they need when th
 
 @dataclass(frozen=True, slots=True)
 class Rows:
-    """Rows of S slices, R in all, for K kernels. ``offset`` and ``length`` (R,) locate a row's grid in ``grid`` (K, total); bent rows
-    have length 0. ``base`` (2 S,) and ``cuts`` (2 S, C) as in the plan."""
+    """Rows of S slices, R in all, for K kernels. ``offset`` and ``length`` (R,) locate a row's grid in ``grid`` (K,
+    total); bent rows have length 0. ``base`` (2 S,) and ``cuts`` (2 S, C) as in the plan."""
 
     exponent: Floats
     period: Floats
@@ -106,8 +107,8 @@ def cut(rows: Rows, s: int) -> Rows:
     hi = int(rows.offset[b]) if b < rows.offset.shape[0] else rows.grid.shape[1]
     side = np.array([s, s + rows.base.shape[0] // 2])
     return Rows(
-        rows.exponent[a:b], rows.period[a:b], rows.nodes[a:b], np.array([0, b - a]), rows.base[side] - a, rows.cuts[side],
-        rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(), rows.log_scale[a:b],
+        rows.exponent[a:b], rows.period[a:b], rows.nodes[a:b], np.array([0, b - a]), rows.base[side] - a,
+        rows.cuts[side], rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(), rows.log_scale[a:b],
         rows.rounding[:, a:b], rows.slope[:, a:b], rows.pieces[:, a:b],
         {r - a: parts for r, parts in rows.bent.items() if a <= r < b},
     )  # fmt: skip

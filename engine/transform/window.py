@@ -56,23 +56,23 @@ def inverse_window(nodes: int) -> Floats:
 
 
 def grid_of(coefficients: Complexes) -> Floats:
-    """One period of the real grid with ``MARGIN`` values repeated at either end. Shape (..., grid_length + 2 MARGIN).
+    """One period of the real grid, from minus a half to a half, with ``MARGIN`` values repeated at either end. Shape
+    (..., grid_length + 2 MARGIN).
 
     ``coefficients``: shape (..., N), already multiplied by ``inverse_window(N)``.
     """
     length = grid_length(coefficients.shape[-1])
-    out = np.empty((*coefficients.shape[:-1], length + 2 * MARGIN))
-    out[..., MARGIN:-MARGIN] = fft.irfft(coefficients, n=length, axis=-1)
-    out[..., :MARGIN] = out[..., length : length + MARGIN]
-    out[..., -MARGIN:] = out[..., MARGIN : 2 * MARGIN]
-    return out
+    half = length // 2
+    grid = fft.irfft(coefficients, n=length, axis=-1)
+    return np.concatenate([grid[..., half - MARGIN :], grid[..., : half + MARGIN]], axis=-1)
 
 
 def sums_at(grids: Floats, offset: Ints, length: Ints, position: Floats) -> Floats:
     """The sums at ``position`` (n,), in periods, any real number: shape (K, n).
 
-    ``grids``: (K, total), rows of ``grid_of`` end to end; point ``i`` belongs to the row that starts at ``offset[i]`` with
-    ``length[i]`` points in its period. Error at most ``WINDOW_ERROR`` times the row's ``sum |c_j| / w_j`` (in the scale of ``f``).
+    ``grids``: (K, total), rows of ``grid_of`` end to end; point ``i`` belongs to the row that starts at ``offset[i]``
+    with ``length[i]`` points in its period. Error at most ``WINDOW_ERROR`` times the row's ``sum |c_j| / w_j`` (in
+    the scale of ``f``).
     """
     out = np.empty((grids.shape[0], position.shape[0]))
     for start in range(0, position.shape[0], _BLOCK):
@@ -85,7 +85,7 @@ def sums_at(grids: Floats, offset: Ints, length: Ints, position: Floats) -> Floa
 
 def _window(offset: Ints, length: Ints, position: Floats) -> tuple[Floats, Ints]:
     """Weights and indices of the WIDTH neighbours of each point."""
-    x = (position - np.floor(position)) * length
+    x = (position - np.rint(position)) * length  # exact for |position| < 1/2: a small k keeps its digits
     first = np.ceil(x - 0.5 * WIDTH)
     t = _OFFSETS + (first - x)[:, None]
     t *= 2.0 / WIDTH
@@ -96,4 +96,4 @@ def _window(offset: Ints, length: Ints, position: Floats) -> tuple[Floats, Ints]
     t -= 1.0
     t *= BETA
     np.exp(t, out=t)
-    return t, (first.astype(np.int64) + (offset + MARGIN))[:, None] + _OFFSETS
+    return t, (first.astype(np.int64) + (offset + length // 2 + MARGIN))[:, None] + _OFFSETS
