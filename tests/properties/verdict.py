@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -73,8 +74,13 @@ def judge(
         binary = np.where(strikes >= FORWARD, Payoff.DIGITAL_CALL, Payoff.DIGITAL_PUT).astype(np.uint8)
         payoffs, strikes = np.concatenate([payoffs, binary]), np.concatenate([strikes, strikes])
     one = Slice(tau, FORWARD, 1.0, strikes, payoffs)
-    found = price_smiles(model, [one], tolerance=tolerance, implied_vols=False)[0]
     out = Verdict(smiles=1)
+    try:
+        with warnings.catch_warnings(action="error"):
+            found = price_smiles(model, [one], tolerance=tolerance, implied_vols=False)[0]
+    except (ArithmeticError, RuntimeWarning, LookupError, ValueError) as fault:  # counted like a wrong price
+        out.faults.append(f"{model} tau={tau!r} strikes={strikes.tolist()} tolerance={tolerance!r}: {fault!r}")
+        return out
     for i, true in enumerate(exact):
         price, bound = float(found.prices[i]), float(found.error_bounds[i])
         with gmpy2.context(gmpy2.get_context(), precision=160):
