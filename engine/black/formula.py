@@ -1,7 +1,7 @@
 """Black's formula for the out-of-the-money side, to the last digits over the whole double range.
 
-A put at ``k < 0`` is ``e^k`` times the call at ``-k``, so the value is ``min(1, e^k) c(|k|, s)`` with ``c = phi(d) E`` of
-``engine.black.mills``: by the series near the money, as the complement of the gap well above the point of inflexion
+A put at ``k < 0`` is ``e^k`` times the call at ``-k``, so the value is ``min(1, e^k) c(|k|, s)`` with ``c = phi(d) E``
+of ``engine.black.mills``: by the series near the money, as the complement of the gap well above the point of inflexion
 (``s > sqrt(2 |k|)``), as the difference of Mills' ratios elsewhere. Relative error: a few units of rounding times the
 condition number ``1 + |d ln value / d ln s| + |d ln value / d ln k|``, wherever the value is a normal double.
 

@@ -1,8 +1,8 @@
 """Black's formula without its cancellations: the scaled value ``E`` from which price, gap and derivatives follow.
 
-Problem. With ``a = |k|``, ``h = a / s``, ``t = s / 2``, ``d = h - t``, ``p = h + t`` the out-of-the-money value per unit of
-``min(forward, strike)`` is ``c = Phi(-d) - e^a Phi(-p)`` and its gap to the upper bound ``g = 1 - c = Phi(d) + e^a Phi(-p)``.
-Both terms of ``c`` can agree to many digits and both can underflow.
+Problem. With ``a = |k|``, ``h = a / s``, ``t = s / 2``, ``d = h - t``, ``p = h + t`` the out-of-the-money value per
+unit of ``min(forward, strike)`` is ``c = Phi(-d) - e^a Phi(-p)``, its gap to the upper bound
+``g = 1 - c = Phi(d) + e^a Phi(-p)``. The terms of ``c`` can agree to many digits, and they can underflow.
 
 Formula. ``e^a phi(p) = phi(d)``, so that with Mills' ratio ``Y(z) = Phi(-z) / phi(z) = sqrt(pi / 2) erfcx(z / sqrt 2)``
 
@@ -10,16 +10,19 @@ Formula. ``e^a phi(p) = phi(d)``, so that with Mills' ratio ``Y(z) = Phi(-z) / p
 
 and since ``dc/ds = phi(d)``, the logarithmic derivatives are ``d ln c / ds = 1 / E`` and ``d ln g / ds = -1 / E``.
 
-Near the money (``a < NEAR_MONEY``, ``t`` below about ``NEAR_DEVIATION``) the difference still cancels, by ``Y / (2 t)``. From
-``Y' = z Y - 1`` it is, exactly, with ``x = h t = a / 2``,
+Near the money (``a < NEAR_MONEY``, ``t`` below about ``NEAR_DEVIATION``) the difference still cancels, by the factor
+``Y / (2 t)``. From ``Y' = z Y - 1`` it is, exactly, with ``x = h t = a / 2``,
 
-    E = 2 t exp(t^2 / 2) [ J - Y(h) h S ],   S = sinh(x) / x,   J = int_0^1 cosh(x (1 - v)) exp(-t^2 v^2 / 2) dv
+    E = 2 t exp(t^2 / 2) [ J - Y(h) h S ],  S = sinh(x) / x,  J = int_0^1 cosh(x (1 - v)) exp(-t^2 v^2 / 2) dv
 
-and expanding the exponential, ``J = S - sum_{j>=1} t^(2j) K_j(x)``, ``K_j = (-1)^(j+1) (2j-1)!! sum_i x^(2i) / (2i+2j+1)!``
-(Beta integrals), so that the bracket is ``S (1 - h Y(h)) - sum_j t^(2j) K_j``. What cancels in ``1 - h Y(h)`` is a factor of
-about ``h^2 + 2``, the condition number of ``c`` in ``s`` itself. Elsewhere ``Y(d) - Y(p)`` loses at most ``max(3, 2 h^2)``.
+and expanding the exponential (Beta integrals), ``J = S - sum_(j>=1) t^(2j) K_j(x)`` with
 
-Reference: Abramowitz and Stegun (1964), 7.1.13 and 26.2.12 for Mills' ratio; the rest is derived here.
+    K_j = (-1)^(j+1) (2j-1)!! sum_i x^(2i) / (2i+2j+1)!
+
+so that the bracket is ``S (1 - h Y(h)) - sum_j t^(2j) K_j``. What cancels in ``1 - h Y(h)`` is a factor of about
+``h^2 + 2``, the condition number of ``c`` in ``s`` itself. Elsewhere ``Y(d) - Y(p)`` loses at most ``max(3, h^2)``.
+
+Reference: M. Abramowitz and I. Stegun (1964), 7.1.13 and 26.2.12, for Mills' ratio; the rest is derived here.
 """
 
 from __future__ import annotations
@@ -34,11 +37,11 @@ from engine.arrays import Floats
 
 __all__ = ["NEAR_DEVIATION", "NEAR_MONEY", "difference", "difference_near", "mills", "total"]
 
-NEAR_MONEY = 0.5  # a below which, with t below NEAR_DEVIATION, the series replaces the difference
+NEAR_MONEY = 1.0  # a below which, with t below NEAR_DEVIATION, the series replaces the difference
 NEAR_DEVIATION = 0.5  # the series holds to t = 0.6: there the first term left out is below 1e-17 of the sum
 _ROOT_HALF = math.sqrt(0.5)
 _ROOT_HALF_PI = math.sqrt(0.5 * math.pi)
-_X_TERMS = 6  # x^2 <= 1/16: x^12 / 13! = 1e-17
+_X_TERMS = 8  # x^2 <= 1/4: x^16 / 17! = 4e-20; seven would leave x^14 / 15! = 5e-17
 _T_TERMS = 10  # t^2 <= 0.36: 21!! t^22 / 23! = (t^2 / 2)^11 / (23 * 11!) = 7e-18
 
 
