@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from enum import IntFlag
 from functools import lru_cache
-from typing import TypeAlias
+from typing import Final, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,10 +13,14 @@ from numpy.typing import NDArray
 from engine.arrays import Floats, vector
 from engine.errors import InputError
 
-__all__ = ["Bools", "ChainExpiry", "FlagCodes", "QuoteFlag", "flag_words"]
+__all__ = ["DISCOUNT_FACTOR_RANGE", "PRICE_RANGE", "Bools", "ChainExpiry", "FlagCodes", "QuoteFlag", "flag_words"]
 
 Bools: TypeAlias = NDArray[np.bool_]
 FlagCodes: TypeAlias = NDArray[np.uint16]
+
+
+PRICE_RANGE: Final = (1e-12, 1e15)  # forwards the engine prices; squares of prices stay far inside the double range
+DISCOUNT_FACTOR_RANGE: Final = (1e-12, 1e3)  # what the engine prices
 
 
 class QuoteFlag(IntFlag):
@@ -50,12 +54,13 @@ class ChainExpiry:
     """Quotes of European options of one expiry, one row a strike.
 
     ``expiry`` in years (any number: one that is not positive is reported as expired, not refused); ``strikes`` (n,)
-    positive, any order, repeats allowed; the four quote columns (n,) in price units, discounted as quoted, NaN where
-    there is no quote. ``forward`` and ``discount_factor``: given values, positive, or None to have them inferred.
-    A negative or infinite quote is no quote: it becomes NaN and is counted in ``impossible``.
+    within ``PRICE_RANGE``, any order, repeats allowed; the four quote columns (n,) in price units, discounted as
+    quoted, NaN where there is no quote. ``forward`` (within ``PRICE_RANGE``) and ``discount_factor`` (within
+    ``DISCOUNT_FACTOR_RANGE``): given values, or None to have them inferred. A quote that is negative or above the range
+    is no quote: it becomes NaN and is counted in ``impossible``.
 
-    Raises InputError naming the field when a column is not an array of numbers or of another length, a strike is not
-    positive and finite, or a given forward or discount factor is not.
+    Raises InputError naming the field when a column is not an array of numbers or of another length, or a strike, a
+    given forward or a given discount factor is outside its range.
     """
 
     expiry: float
@@ -70,21 +75,22 @@ class ChainExpiry:
 
     def __post_init__(self) -> None:
         strikes = vector("strikes", self.strikes)
-        wrong = np.flatnonzero(~(np.isfinite(strikes) & (strikes > 0.0)))
+        wrong = np.flatnonzero(~((strikes >= PRICE_RANGE[0]) & (strikes <= PRICE_RANGE[1])))
         if wrong.size:
-            raise InputError("strikes", "is not a positive number", index=(int(wrong[0]),), allowed="strike > 0")
+            at = int(wrong[0])
+            raise InputError("strikes", f"is {float(strikes[at])!r}", index=(at,), allowed=_words(PRICE_RANGE))
         object.__setattr__(self, "strikes", strikes)
         impossible = 0
         for name in ("call_bids", "call_asks", "put_bids", "put_asks"):
             quotes = vector(name, getattr(self, name), length=strikes.size)
-            bad = np.isinf(quotes) | (quotes < 0.0)
+            bad = (quotes < 0.0) | (quotes > PRICE_RANGE[1])
             impossible += int(np.count_nonzero(bad))
             object.__setattr__(self, name, np.where(bad, np.nan, quotes))
         object.__setattr__(self, "impossible", impossible)
-        for name in ("forward", "discount_factor"):
+        for name, limits in (("forward", PRICE_RANGE), ("discount_factor", DISCOUNT_FACTOR_RANGE)):
             value = getattr(self, name)
-            if value is not None and not (np.isfinite(value) and value > 0.0):
-                raise InputError(name, "is not a positive number", allowed=f"{name} > 0")
+            if value is not None and not limits[0] <= value <= limits[1]:
+                raise InputError(name, f"is {value!r}", allowed=_words(limits))
 
     @property
     def size(self) -> int:
@@ -107,3 +113,7 @@ class ChainExpiry:
         calls = (self.call_bids > 0.0) & (self.call_asks >= self.call_bids)
         puts = (self.put_bids > 0.0) & (self.put_asks >= self.put_bids)
         return np.asarray(calls & puts, dtype=np.bool_)
+
+
+def _words(limits: tuple[float, float]) -> str:
+    return f"{limits[0]:g} to {limits[1]:g}"
