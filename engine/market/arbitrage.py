@@ -74,7 +74,9 @@ def _accuse_in_rounds(ladder: Ladder, suspects: Bools, search: Callable[[Ladder]
         members = left.rows[search(left)]
         if not members.size:
             return accused
-        parts = np.bincount(members.ravel(), minlength=ladder.size)
+        once = np.ones(members.shape)
+        once[:, -1] = members[:, -1] != members[:, -2]  # a quote bought twice takes part once
+        parts = np.bincount(members.ravel(), weights=once.ravel(), minlength=ladder.size)
         parts = np.where(suspects, members.size, parts)[members]
         accused[members[parts == parts.max(axis=1, keepdims=True)]] = True
         left = ladder.without(accused)

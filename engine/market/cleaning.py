@@ -9,9 +9,9 @@ with a fitted forward or discount factor grants ``slack`` standard errors of it)
 - ``below_intrinsic``: the *ask* is below ``lower``, so that buying and hedging with the forward earns at once.
   (A midpoint below ``lower`` with the ask above it is no fault of the quote: it has no volatility, and its status
   says so.)
-- ``parity_outlier``: the pair was left out of the parity regression, and this leg is the one further from the time
-  value of its good neighbours, interpolated in the strike; both legs where the distances are alike (within a factor of
-  two) or there are no good neighbours on both sides.
+- ``parity_outlier``: the pair was left out of the parity regression, and this leg is the one further from its good
+  neighbours: as a call value (the put's by parity, so that nothing bends at the forward), interpolated in the strike;
+  both legs where the distances are alike (within a factor of two) or there are no good neighbours on both sides.
 - ``vertical_arbitrage``, ``butterfly_arbitrage``, ``calendar_arbitrage``: see ``engine.market.arbitrage``; crossed
   quotes are not held against others, and a quote with one of the flags before is to blame before one without. A bid
   above the maximum (``D F`` for a call, ``D K`` for a put) is vertical, against strike zero.
@@ -164,14 +164,13 @@ class _Legs:
 
 
 def _blamed_legs(chain: ChainExpiry, fit: ForwardFit) -> _Legs:
-    """Which leg of each outlying pair is at fault: the one further from its good neighbours' time value."""
+    """Which leg of each outlying pair is at fault: the one further, as a call, from its good neighbours."""
     outliers = fit.outliers
     good = np.flatnonzero(chain.paired & ~outliers)
     if not outliers.any() or good.size < 2:
         return _Legs(outliers, outliers)
-    line = fit.discount_factor * (fit.forward - chain.strikes)
-    from_calls = chain.call_mids - np.maximum(line, 0.0)
-    from_puts = chain.put_mids - np.maximum(-line, 0.0)
+    from_calls = chain.call_mids
+    from_puts = chain.put_mids + fit.discount_factor * (fit.forward - chain.strikes)
     good = good[np.argsort(chain.strikes[good], kind="stable")]
     neighbours = 0.5 * (from_calls + from_puts)[good]
     expected = np.interp(chain.strikes, chain.strikes[good], neighbours, left=np.nan, right=np.nan)

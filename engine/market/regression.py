@@ -139,7 +139,7 @@ def _explained(rows: Floats, target: Floats, kept: Bools, cutoff: float) -> bool
 
 
 def _finish(rows: Floats, target: Floats, kept: Bools, correction: float, *, decided: bool) -> RobustFit:
-    """Line, covariance and scale (that of the residuals times ``correction``, at least one) by the observations kept."""
+    """Line, covariance and scale (of the residuals, times ``correction``, at least one) by the observations kept."""
     coefficients = _least_squares(rows, target, kept)
     residuals = np.abs(target - rows @ coefficients)
     scale = max(1.0, correction * _residual_scale(residuals, kept, rows.shape[1]))

@@ -96,8 +96,8 @@ def test_standard_errors_cover():
 
 
 def test_noise_beyond_the_spreads_widens_the_errors():
-    """Midpoints off by five spreads (normal noise): the residuals say so, and the errors still cover. The scale is meant to
-    err upward by its small-sample factor 1 + 5 / (n - 2) (Rousseeuw and Leroy 1987, from memory), and by no more."""
+    """Midpoints off by five spreads (normal noise): the residuals say so, and the errors still cover. The scale is
+    meant to err upward by its small-sample factor 1 + 5 / (n - 2) (Rousseeuw and Leroy 1987, from memory), not more."""
     random = np.random.default_rng(7)
     scores, scales = [], []
     for _ in range(300):
