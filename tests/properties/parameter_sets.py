@@ -18,7 +18,7 @@ from hypothesis.strategies import SearchStrategy
 from engine import MODELS
 from tests.reference.mp_models import reference_model
 
-__all__ = ["DIMENSIONS", "expiry", "pair", "unit_cube"]
+__all__ = ["DIMENSIONS", "expiry", "pair", "twins", "unit_cube"]
 
 HOUR = 1.0 / (365.0 * 24.0)
 
@@ -65,7 +65,11 @@ def pair(name: str, u: Sequence[float]) -> tuple[Any, Any]:
     """The engine's model ``name`` and its reference twin; ``u`` has ``DIMENSIONS[name]`` numbers in [0, 1]."""
     size, make = _MAKERS[name]
     assert len(u) == size
-    values = make(u)
+    return twins(name, make(u))
+
+
+def twins(name: str, values: dict[str, Any]) -> tuple[Any, Any]:
+    """The engine's model and the reference's from parameters by their public names."""
     return MODELS[name](**values), reference_model(name, values)
 
 
