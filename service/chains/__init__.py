@@ -1,0 +1,1 @@
+"""The resource /v1/chains: option chains turned into quoted surfaces."""

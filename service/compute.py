@@ -1,0 +1,113 @@
+"""The only door from the event loop to the CPU: a few threads behind a bounded queue.
+
+Small requests are computed at once, on the loop: a change of thread costs more than a 50-strike smile takes away
+from others. How small is decided twice, by the number of strikes before and by the number of transform nodes once
+the engine has planned: a plan over the allowance is refused by the engine and the request goes to a thread.
+"""
+
+from __future__ import annotations
+
+import asyncio
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from time import perf_counter
+from typing import TypeVar
+
+from engine import RefusedError
+from service.problems import Problem
+from service.settings import Settings
+
+__all__ = ["Compute", "Done", "Outcome", "Task"]
+
+Result = TypeVar("Result")
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """The encoded answer, and what it took: transform nodes (0 where there was no transform)."""
+
+    body: bytes
+    nodes: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Task:
+    """A request ready to be computed. ``work(node_limit)`` gives the outcome or raises; it touches nothing shared.
+    ``strikes`` in all say how large it is."""
+
+    work: Callable[[int], Outcome]
+    strikes: int
+
+
+@dataclass(frozen=True, slots=True)
+class Done:
+    """An outcome, the strikes it was for, and the seconds it took once it had begun."""
+
+    outcome: Outcome
+    strikes: int
+    seconds: float
+
+
+class Compute:
+    """Computing threads of one app; they start with the first request and end with ``close``."""
+
+    def __init__(self, settings: Settings) -> None:
+        self._settings = settings
+        self._pool = ThreadPoolExecutor(settings.compute_threads, thread_name_prefix="compute")
+        self._held = 0
+        self._open = True
+
+    @property
+    def held(self) -> int:
+        """Requests computing or waiting in the queue."""
+        return self._held
+
+    @property
+    def capacity(self) -> int:
+        """The most that ``held`` can be."""
+        return self._settings.compute_threads + self._settings.compute_queue
+
+    @property
+    def accepting(self) -> bool:
+        """Whether another request would be taken."""
+        return self._open and self._held < self.capacity
+
+    async def run(self, task: Task) -> Done:
+        """Compute a task, here if it is small."""
+        if task.strikes <= self._settings.inline_strikes:
+            try:
+                return _timed(task, self._settings.inline_nodes)
+            except RefusedError:
+                pass
+        return await self.away(lambda: _timed(task, self._settings.max_nodes))
+
+    async def prepare_and_run(self, prepare: Callable[[], Task]) -> Done:
+        """Make a task of a large body and compute it, all of it in a thread."""
+        return await self.away(lambda: _timed(prepare(), self._settings.max_nodes))
+
+    async def away(self, work: Callable[[], Result]) -> Result:
+        """Run ``work`` in a thread; raises Problem ``overloaded`` when the queue is full."""
+        if not self.accepting:
+            raise Problem(
+                "overloaded",
+                f"{self._settings.compute_threads} requests are computing and {self._settings.compute_queue} wait, "
+                "which is the limit.",
+                headers={"Retry-After": str(self._settings.retry_after)},
+            )
+        self._held += 1
+        try:
+            return await asyncio.get_running_loop().run_in_executor(self._pool, work)
+        finally:
+            self._held -= 1
+
+    def close(self) -> None:
+        """Take no more work; what runs ends, what waits is dropped."""
+        self._open = False
+        self._pool.shutdown(wait=True, cancel_futures=True)
+
+
+def _timed(task: Task, node_limit: int) -> Done:
+    begin = perf_counter()
+    outcome = task.work(node_limit)
+    return Done(outcome, task.strikes, perf_counter() - begin)

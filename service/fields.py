@@ -1,0 +1,33 @@
+"""Fields of request and answer schemas: each with a description, a unit and an example; objects that refuse what they
+do not know."""
+
+from __future__ import annotations
+
+from typing import Annotated, Any
+
+from pydantic import BaseModel, ConfigDict, Field
+
+__all__ = ["Answer", "Asked", "Finite", "Positives", "described"]
+
+
+class Asked(BaseModel):
+    """An object of a request: unknown fields are refused, numbers are numbers."""
+
+    model_config = ConfigDict(strict=True, extra="forbid", allow_inf_nan=False)
+
+
+class Answer(BaseModel):
+    """An object of an answer, for the OpenAPI document and the tests; answers are encoded without it."""
+
+    model_config = ConfigDict(extra="forbid")
+
+
+def described(text: str, *, unit: str, example: Any, default: Any = ..., **limits: Any) -> Any:
+    """A field with what every field must say. ``unit`` is in words, ``"none"`` where there is none."""
+    return Field(default, description=text, examples=[example], json_schema_extra={"x-unit": unit}, **limits)
+
+
+# The first bad value ends the reading of a column, so that a large one full of faults costs no more than a good one;
+# small bodies are read again to the end for a full list (``service.validation``).
+Finite = Annotated[float, Field(allow_inf_nan=False)]
+Positives = Annotated[list[Annotated[float, Field(gt=0.0, allow_inf_nan=False)]], Field(min_length=1, fail_fast=True)]

@@ -1,0 +1,1 @@
+"""What whoever runs the service needs: probes and metrics."""
