@@ -53,7 +53,10 @@ def vertical(ladder: Ladder, *, discount_factors: Floats, suspects: Bools) -> Bo
 
 
 def butterfly(ladder: Ladder, *, suspects: Bools) -> Bools:
-    """Rows (size,) accused of a butterfly arbitrage; needs no forward and no discount factor."""
+    """Rows (size,) accused of a butterfly arbitrage; needs no forward and no discount factor.
+
+    A bid over the ask of another quote at the same strike is left to ``vertical``.
+    """
     return _accuse_in_rounds(ladder, suspects, _butterfly_members)
 
 
@@ -68,18 +71,20 @@ def calendar(ladder: Ladder, *, years: Floats, uncertainties: Floats, suspects: 
 
 
 def _accuse_in_rounds(ladder: Ladder, suspects: Bools, search: Callable[[Ladder], Ints]) -> Bools:
+    """Search, accuse, set aside, search again where something was found: fewer quotes make no new arbitrage."""
     accused = np.zeros(ladder.size, dtype=np.bool_)
     left = ladder
     for _ in range(_ROUNDS):
-        members = left.rows[search(left)]
-        if not members.size:
+        found = search(left)
+        if not found.size:
             return accused
+        members = left.rows[found]
         once = np.ones(members.shape)
         once[:, -1] = members[:, -1] != members[:, -2]  # a quote bought twice takes part once
         parts = np.bincount(members.ravel(), weights=once.ravel(), minlength=ladder.size)
         parts = np.where(suspects, members.size, parts)[members]
         accused[members[parts == parts.max(axis=1, keepdims=True)]] = True
-        left = ladder.without(accused)
+        left = left.without(accused, expiries=left.expiries[found])
     accused[left.rows[search(left)].ravel()] = True
     return accused
 
@@ -158,57 +163,65 @@ def _butterfly_members(ladder: Ladder) -> Ints:
 
 def _calendar_members(ladder: Ladder, years: Floats, uncertainties: Floats) -> Ints:
     """Triples of positions: the early quote sold, the two later ones bought (one twice where levels are equal)."""
-    found = [np.zeros((0, 3), dtype=np.int64)]
-    vertices, buyable = lower_hull(ladder), ladder.buyable
+    vertices, asked = np.flatnonzero(lower_hull(ladder)), np.flatnonzero(ladder.buyable)
     bid = np.flatnonzero(~np.isnan(ladder.bids))
+    best = [np.zeros((0, 3), dtype=np.int64)]
+    waiting: list[Ints] = []
     for late in np.unique(ladder.expiries):
-        mine = ladder.expiries == late
         early = bid[years[ladder.expiries[bid]] < years[late]]
-        hull = np.flatnonzero(vertices & mine)
-        if not hull.size or not early.size:
-            continue
-        best = _chords(ladder, early, hull, uncertainties, steps=_CHORDS[:1])
-        sellers = np.flatnonzero(best.over[:, 0])
-        if not sellers.size:
-            continue
-        left, right = best.left[sellers], best.right[sellers]
-        found.append(np.column_stack([early[sellers], left, right]))
-        near = _chords(ladder, early[sellers], np.flatnonzero(buyable & mine), uncertainties, steps=_CHORDS)
-        row, column = np.nonzero(near.over & ((near.left != left) | (near.right != right)))
-        found.append(np.column_stack([early[sellers[row]], near.left[row, column], near.right[row, column]]))
-    return np.concatenate(found)
+        waiting.append(_chords(ladder, early, _of(ladder, vertices, late), steps=_CHORDS[:1]))
+        if sum(len(chords) for chords in waiting) > _COMBINATIONS:
+            best.append(_over_chords(ladder, np.concatenate(waiting), uncertainties))
+            waiting = []
+    if waiting:
+        best.append(_over_chords(ladder, np.concatenate(waiting), uncertainties))
+    found = np.concatenate(best)
+    late_of = ladder.expiries[found[:, 1]]
+    near = [
+        _chords(ladder, found[late_of == late, 0], _of(ladder, asked, late), steps=_CHORDS)
+        for late in np.unique(late_of)
+    ]
+    if not near:
+        return found
+    return np.unique(np.concatenate([found, _over_chords(ladder, np.concatenate(near), uncertainties)]), axis=0)
 
 
-@dataclass(frozen=True, slots=True)
-class _Chords:
-    """Positions (v, w) of the ends of w chords for each of v early quotes, and whether its bid is over the chord."""
-
-    left: Ints
-    right: Ints
-    over: Bools
+def _of(ladder: Ladder, positions: Ints, expiry: int) -> Ints:
+    """Those of ``positions`` (ascending) that belong to one expiry."""
+    first, end = np.searchsorted(ladder.expiries[positions], [expiry, expiry + 1])
+    return positions[first:end]
 
 
-def _chords(
-    ladder: Ladder, early: Ints, late: Ints, uncertainties: Floats, *, steps: tuple[tuple[int, int], ...]
-) -> _Chords:
-    """Chords of the asks of ``late`` (positions of one expiry) around the level of each of ``early`` (v,).
+def _chords(ladder: Ladder, early: Ints, late: Ints, *, steps: tuple[tuple[int, int], ...]) -> Ints:
+    """Positions (c, 3) of early quotes and of the ends of chords around their levels, ends among ``late`` (one expiry).
 
-    ``steps`` beyond the nearest position on the left and on the right, one pair a chord. A bid is over the chord when
-    it exceeds it by more than the forwards and discount factors of both expiries are uncertain, and rounding.
+    ``steps`` beyond the nearest position on the left and on the right, one pair a chord; none that is off the end.
     """
-    point, level = ladder.levels[early][:, None], ladder.levels[late]
+    if not late.size:
+        return np.zeros((0, 3), dtype=np.int64)
+    level = ladder.levels[late]
     after = np.searchsorted(level, ladder.levels[early], side="right")[:, None]
     left = after - 1 - np.array([down for down, _ in steps])
     right = after + np.array([up for _, up in steps])
-    right = np.where(point == level[-1], np.minimum(right, late.size - 1), right)
-    inside = (left >= 0) & (right < late.size)
-    left, right = late[np.clip(left, 0, late.size - 1)], late[np.clip(right, 0, late.size - 1)]
+    at_end = (ladder.levels[early] == level[-1])[:, None]
+    right = np.where(at_end, np.minimum(right, late.size - 1), right)
+    row, column = np.nonzero((left >= 0) & (right < late.size))
+    return np.column_stack([early[row], late[left[row, column]], late[right[row, column]]])
+
+
+def _over_chords(ladder: Ladder, chords: Ints, uncertainties: Floats) -> Ints:
+    """The triples among ``chords`` (c, 3) whose early bid is over the chord of the later asks.
+
+    By more than the forwards and discount factors of both expiries are uncertain, and rounding.
+    """
+    early, left, right = chords.T
+    point, bids = ladder.levels[early], ladder.bids[early]
     gap = ladder.levels[right] - ladder.levels[left]
     slope = np.divide(ladder.asks[right] - ladder.asks[left], gap, out=np.zeros_like(gap), where=gap > 0.0)
     chord = ladder.asks[left] + slope * (point - ladder.levels[left])
-    bids = ladder.bids[early][:, None]
     of_discount = np.abs(chord) + bids
     of_forward = of_discount + np.abs(slope * point)
-    error = uncertainties[ladder.expiries[early]] + uncertainties[ladder.expiries[late[0]]]
-    slack = error[:, :1] * of_forward + error[:, 1:] * of_discount + _ROUNDING * of_forward
-    return _Chords(left, right, inside & (bids - chord > slack))
+    error = uncertainties[ladder.expiries[early]] + uncertainties[ladder.expiries[left]]
+    slack = error[:, 0] * of_forward + error[:, 1] * of_discount + _ROUNDING * of_forward
+    over: Bools = bids - chord > slack
+    return np.asarray(chords[over], dtype=np.int64)

@@ -56,9 +56,9 @@ class Ladder:
         whole = cls(rows, expiries[rows], np.zeros_like(rows), levels[rows], bids[rows], asks[rows], levels.size)
         return whole._only(np.ones(rows.size, dtype=np.bool_))
 
-    def without(self, accused: Bools) -> Ladder:
-        """The ladder with the rows of ``accused`` (size,) set aside."""
-        return self._only(~accused[self.rows])
+    def without(self, accused: Bools, *, expiries: Ints) -> Ladder:
+        """The part of the ladder that belongs to ``expiries``, with the rows of ``accused`` (size,) set aside."""
+        return self._only(~accused[self.rows] & np.isin(self.expiries, expiries))
 
     @property
     def buyable(self) -> Bools:
