@@ -107,16 +107,21 @@ CRITICAL_MOMENTS = [
 
 @pytest.mark.parametrize(("model", "tau", "upper", "lower"), CRITICAL_MOMENTS)
 def test_critical_moments(model: Heston, tau: float, upper: float, lower: float) -> None:
-    low, high = (float(np.reshape(edge, -1)[0]) for edge in model.strip(tau))
+    edges = model.strip(tau, precise=True)
+    low, high = (float(np.reshape(edge, -1)[0]) for edge in edges)
     assert abs(high - upper) <= 2e-13 * upper
     assert abs(low - lower) <= 2e-13 * (1.0 - lower)
+    inner_low, inner_high = (float(np.reshape(edge, -1)[0]) for edge in model.strip(tau))  # coarser, from inside
+    assert high - 2e-3 * (high - 1.0) <= inner_high <= high
+    assert low <= inner_low <= low * (1.0 - 2e-3)
 
 
 def test_second_moment_of_a_positively_correlated_set_explodes() -> None:
     """rho = +0.5, kappa = 0.5, sigma = 1: E[S^2] is infinite from T* = 1.828485085 on (recomputed)."""
     model = Heston(v0=0.04, kappa=0.5, theta=0.04, sigma=1.0, rho=0.5)
     for tau, exists in ((1.828485084, True), (1.828485086, False)):
-        assert (float(np.reshape(model.strip(tau)[1], -1)[0]) > 2.0) is exists
+        upper = model.strip(tau, precise=True)[1]
+        assert (float(np.reshape(upper, -1)[0]) > 2.0) is exists
 
 
 @pytest.mark.parametrize("model", [FANG, ANDERSEN])
