@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import logging
-import sys
 import traceback
 from datetime import UTC, datetime
 from typing import Any
 
 import orjson
 
-__all__ = ["LOGGER", "JsonLines", "log_to_standard_error"]
+__all__ = ["LOGGER", "JsonLines", "log_config"]
 
 LOGGER = logging.getLogger("smilewright")
 
@@ -30,12 +29,14 @@ class JsonLines(logging.Formatter):
         return orjson.dumps(line, default=str).decode()
 
 
-def log_to_standard_error(level: str) -> None:
-    """Send this service's and the server's records to standard error as JSON lines."""
-    handler = logging.StreamHandler(sys.stderr)
-    handler.setFormatter(JsonLines())
-    for name in ("smilewright", "uvicorn"):
-        logger = logging.getLogger(name)
-        logger.handlers[:] = [handler]
-        logger.setLevel(level.upper())
-        logger.propagate = False
+def log_config(level: str) -> dict[str, Any]:
+    """Configuration, as ``logging.config.dictConfig`` takes it: this service's and the server's records as JSON lines
+    on standard error."""
+    logger = {"handlers": ["lines"], "level": level.upper(), "propagate": False}
+    return {
+        "version": 1,
+        "disable_existing_loggers": False,
+        "formatters": {"json": {"()": "service.logs.JsonLines"}},
+        "handlers": {"lines": {"class": "logging.StreamHandler", "formatter": "json", "stream": "ext://sys.stderr"}},
+        "loggers": {"smilewright": logger, "uvicorn": logger},
+    }

@@ -16,7 +16,7 @@ PREFIX = "SMILEWRIGHT_"
 
 
 class SettingsError(Exception):
-    """Settings that cannot be used; the message lists every fault, one a line."""
+    """Settings that cannot be used; the message lists every fault."""
 
 
 def _cores() -> int:
@@ -57,7 +57,7 @@ class Settings(BaseModel):
         try:
             return cls.model_validate(given)
         except ValidationError as error:
-            raise SettingsError("\n".join(_fault(one["loc"], one["msg"]) for one in error.errors())) from None
+            raise SettingsError("; ".join(_fault(one["loc"], one["msg"]) for one in error.errors())) from None
 
 
 def _fault(place: tuple[int | str, ...], message: str) -> str:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Final, Literal, TypeAlias
 
-from pydantic import AfterValidator, Field
+from pydantic import Field
 
 from engine import TOLERANCE_RANGE
 from service.fields import Answer, described
@@ -19,12 +19,6 @@ EXAMPLE: Final[dict[str, Any]] = {
     "market": {"spot": 100.0, "rate": 0.01, "dividend_yield": 0.02},
     "slices": [{"expiry": 1.0, "strikes": [80.0, 90.0, 100.0, 110.0, 120.0], "payoff": "call"}],
 }
-
-
-def _no_repeats(outputs: list[Output]) -> list[Output]:
-    if len(set(outputs)) < len(outputs):
-        raise ValueError("names an output twice")
-    return outputs
 
 
 class SmileSliceAsked(SliceAsked):
@@ -50,7 +44,7 @@ class SmilesAsked(SmileTerms):
     slices: Annotated[list[SmileSliceAsked], Field(min_length=1)] = described(
         "The expiries to price, in any order.", unit="none", example=EXAMPLE["slices"]
     )
-    outputs: Annotated[list[Output], Field(min_length=1), AfterValidator(_no_repeats)] = described(
+    outputs: Annotated[list[Output], Field(min_length=1, max_length=16)] = described(
         "What to answer; what is not named is absent.",
         unit="none",
         example=["price", "implied_vol", "error_bound"],

@@ -5,6 +5,8 @@ Made from the engine's own parameter lists, so that a model entered there appear
 
 from __future__ import annotations
 
+from functools import reduce
+from operator import or_
 from typing import TYPE_CHECKING, Annotated, Any, Final, Literal, TypeAlias
 
 from pydantic import Field, create_model
@@ -57,7 +59,7 @@ _SCHEMAS: Final = {name: _schema(kind) for name, kind in MODELS.items()}
 if TYPE_CHECKING:
     AnyModel: TypeAlias = ModelAsked
 else:
-    AnyModel = Annotated[tuple(_SCHEMAS.values()), Field(discriminator="name")]
+    AnyModel = Annotated[reduce(or_, _SCHEMAS.values()), Field(discriminator="name")]
 
 
 def engine_model(asked: ModelAsked) -> Model:
