@@ -16,7 +16,7 @@ import numpy as np
 
 from engine.arrays import Complexes, Floats, Ints
 from engine.models.parameters import check_parameters, stack_columns, take_rows
-from engine.protocols import ParameterSpec
+from engine.protocols import CfGradient, ParameterSpec
 
 __all__ = ["Black"]
 
@@ -33,6 +33,7 @@ class Black:
     parameters: ClassVar[tuple[ParameterSpec, ...]] = (
         ParameterSpec("volatility", "per square root of a year", 0.0, 10.0, "Volatility (0.2 is 20 %)."),
     )
+    sensitivity_names: ClassVar[tuple[str, ...]] = ("volatility",)
 
     @classmethod
     def stack(cls, models: Sequence[Self]) -> Self:
@@ -55,6 +56,15 @@ class Black:
         """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
         value = self.log_cf(z, tau)
         return value, 4.0 * np.abs(value)
+
+    def log_cf_gradient(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> CfGradient:
+        """``log_cf_sized`` and the derivatives by volatility and tau."""
+        value, size = self.log_cf_sized(z, tau)
+        square = -0.5 * (z * (z + 1j))
+        gradient = np.stack(
+            np.broadcast_arrays(2.0 * self.volatility * tau * square, self.volatility * self.volatility * square)
+        )
+        return CfGradient(value, size, gradient, 4.0 * np.abs(gradient))
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)] = s^2 p (p - 1) / 2``."""

@@ -21,6 +21,7 @@ from engine.arrays import Floats
 __all__ = ["explosion_edges"]
 
 _NEAREST, _FARTHEST = float(np.log(1e-9)), float(np.log(1e12))  # of an edge from 0 or 1, in the logarithm
+_NONE = 1e-100  # the distance given where an edge is nearer than that: no row can use it
 _MESH = 33  # points of a mesh: three of them narrow a bracket from 48 to 0.0015 in the logarithm
 
 
@@ -28,7 +29,7 @@ def explosion_edges(*, kappa: Any, sigma: Any, rho: Any, tau: Any, precise: bool
     """Edges ``(p_lo, p_hi)``: where the explosion time equals ``tau``, from inside.
 
     Parameters broadcast. Accuracy, relative to the distance from 0 or 1: 1e-3, or 1e-13 if ``precise``; beyond 1e12 an
-    edge counts as infinite.
+    edge counts as infinite, within 1e-9 as not there at all.
     """
     kappa, sigma, rho, tau = np.broadcast_arrays(*np.atleast_1d(kappa, sigma, rho, tau))
     shape = kappa.shape
@@ -63,7 +64,7 @@ def _distance(kappa: Floats, sigma: Floats, rho: Floats, tau: Floats, precise: b
     if precise:
         low = _narrow(low, low + width, f_lo, f_hi, kappa[:, 0], sigma[:, 0], rho[:, 0], rate[:, 0])
     edge = np.exp(low) * (1.0 - 4e-15)
-    return np.where(infinite, np.inf, np.where(none, np.exp(_NEAREST), edge))
+    return np.where(infinite, np.inf, np.where(none, _NONE, edge))
 
 
 def _narrow(

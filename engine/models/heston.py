@@ -26,7 +26,8 @@ from engine.arrays import Complexes, Floats, Ints
 from engine.models.explosion import explosion_edges
 from engine.models.parameters import check_parameters, stack_columns, take_rows
 from engine.models.variance_factor import FactorExponent, factor_exponent
-from engine.protocols import ParameterSpec
+from engine.models.variance_gradient import factor_gradient
+from engine.protocols import CfGradient, ParameterSpec
 
 __all__ = ["HESTON_PARAMETERS", "Heston"]
 
@@ -61,6 +62,7 @@ class Heston:
     title: ClassVar[str] = "Heston stochastic volatility"
     source: ClassVar[str] = "S. Heston, Review of Financial Studies 6(2), 1993"
     parameters: ClassVar[tuple[ParameterSpec, ...]] = HESTON_PARAMETERS
+    sensitivity_names: ClassVar[tuple[str, ...]] = ("v0", "kappa", "theta", "sigma", "rho")
 
     @classmethod
     def stack(cls, models: Sequence[Self]) -> Self:
@@ -75,15 +77,20 @@ class Heston:
         """Raise InputError naming the first parameter outside its range."""
         check_parameters(self, self.parameters)
 
-    def _exponent(self, w: Any, tau: Any, along_path: bool, sized: bool) -> FactorExponent:
+    def _riccati(self, w: Any, along_path: bool) -> tuple[Any, Any, Any]:
+        """``q``, ``b`` and ``D^2``."""
         linear = self.sigma * (self.sigma - 2.0 * self.kappa * self.rho)
         square = self.sigma * self.sigma * self._rho_gap
         d2 = self.kappa * self.kappa + w * (linear - square * w)
         if along_path:  # where the path starts on the axis, D^2 < 0 is approached from the side the path goes to
             d2.imag = np.where(w.imag == 0.0, np.copysign(0.0, linear - 2.0 * square * w.real), d2.imag)
+        return w * (w - 1.0), self.kappa - (self.rho * self.sigma) * w, d2
+
+    def _exponent(self, w: Any, tau: Any, along_path: bool, sized: bool) -> FactorExponent:
+        q, b, d2 = self._riccati(w, along_path)
         return factor_exponent(
-            w * (w - 1.0),
-            self.kappa - (self.rho * self.sigma) * w,
+            q,
+            b,
             d2,
             v0=self.v0,
             kappa=self.kappa,
@@ -92,6 +99,24 @@ class Heston:
             tau=tau,
             along_path=along_path,
             sized=sized,
+        )
+
+    def log_cf_gradient(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> CfGradient:
+        """``log_cf_sized`` and the derivatives by v0, kappa, theta, sigma, rho and tau."""
+        w = 1j * z
+        q, b, d2 = self._riccati(w, along_path)
+        return factor_gradient(
+            w,
+            q,
+            b,
+            d2,
+            v0=self.v0,
+            kappa=self.kappa,
+            theta=self.theta,
+            sigma=self.sigma,
+            rho=self.rho,
+            tau=tau,
+            along_path=along_path,
         )
 
     @property

@@ -19,6 +19,7 @@ from engine.errors import RefusedError
 from engine.protocols import Model
 from engine.transform import plan_cache
 from engine.transform.kernels import Kernel
+from engine.transform.moments import NOTHING
 from engine.transform.plan import Plan, plan_rows
 from engine.transform.reach import Strikes, reach_of
 from engine.transform.record import EPS, RowValues, assemble
@@ -29,6 +30,7 @@ __all__ = ["Contour", "Inversion", "invert"]
 
 _CHUNK = 64  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
 _HARD_NODES = 4096  # what a bent row is counted as against the node limit: its probes and its sum
+_NOTHING = float(np.exp(NOTHING))
 _MOST_APART = 64  # missed strikes that are then planned one by one
 _TIGHTEST = 2.0**-16  # of the tolerance, for the second plan
 
@@ -84,7 +86,7 @@ def _by_chunks(
         value[:, lo:hi], bound[:, lo:hi] = _at_strikes(rows, part, kernels)
         contours.extend(_contours(rows))
         for apart in (False, True):
-            missed = np.flatnonzero((bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (value[0, lo:hi] > 1e-290))
+            missed = np.flatnonzero((bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (bound[0, lo:hi] > 1e-290))
             if missed.shape[0] == 0 or (apart and missed.shape[0] > _MOST_APART):
                 break
             left = _improve(sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, left, apart)
@@ -190,6 +192,11 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
         )
         found = out_of_the_money(kernel, raw, exponent, k, growth)
         value[i], bound[i] = found.value, found.bound
+    beyond = np.abs(k) > rows.last[side]
+    if beyond.any():
+        for i, kernel in enumerate(kernels):
+            if kernel.markov:
+                value[i, beyond], bound[i, beyond] = 0.0, _NOTHING
     return value, bound
 
 

@@ -21,11 +21,12 @@ from engine.arrays import Floats, Ints
 from engine.protocols import Model
 from engine.transform.reach import Reach
 
-__all__ = ["SideMoments", "side_moments"]
+__all__ = ["NOTHING", "SideMoments", "side_moments"]
 
 POINTS = 64
 _LOWEST = 0.15  # of 1/s, or of the way to the edge of a narrow strip: below it the pole at x = 0 dominates
-_QUADRUPLINGS = 16
+NOTHING = -700.0  # log of a value that is below the double range for every purpose
+_QUADRUPLINGS = 20
 _HIGHEST = 40.0  # of 1/s, at least: Gaussian aliases at exp(-40^2/2) underflow any double
 
 
@@ -48,6 +49,23 @@ class SideMoments:
         at = np.arange(best.shape[0])
         return np.asarray(level[at, best] - self.spread[side, best])
 
+    def log_most(self, kr: Floats) -> Floats:
+        """Markov's bound on the log of the value at one ``kr`` per side, (2 S,)."""
+        return np.asarray(np.min(self.log_power + self.log_moment - self.x * kr[:, None], axis=1))
+
+    def last(self, near: Floats, far: Floats) -> Floats:
+        """Where each side's values sink below ``NOTHING`` between ``near`` and ``far``, (2 S,); ``far`` if they do
+        not."""
+        sinks = self.log_most(far) < NOTHING
+        if not sinks.any():
+            return far
+        low, high = near, far
+        for _ in range(40):
+            middle = 0.5 * (low + high)
+            gone = self.log_most(middle) < NOTHING
+            low, high = np.where(gone, low, middle), np.where(gone, middle, high)
+        return np.where(sinks, high, far)
+
     def loss(self, side: Ints, kr: Floats) -> Floats:
         """``J(x, kr) - min_x J(x, kr)`` for every grid point: units in the exponent lost there. Shape (n, POINTS)."""
         level = self.saddle[side] - self.x[side] * kr[:, None]
@@ -59,7 +77,7 @@ def side_moments(model: Model, tau: Floats, reach: Reach) -> SideMoments:
     s = np.sqrt(model.mean_variance(tau)).reshape(-1, 1)
     low, high = (np.reshape(edge, (-1, 1)) for edge in model.strip(tau))
     scale = np.concatenate([s, s])
-    room = np.concatenate([high - 1.0, -low])
+    room = np.maximum(np.concatenate([high - 1.0, -low]), 1e-100)  # an edge at 1 or 0 itself leaves no room
     top = np.maximum(_HIGHEST, 3.0 * reach.far[:, None] / scale)
     x, log_m = _grid(model, tau, scale, room, top)
     slope = (log_m[:, -1] - log_m[:, -2]) / (x[:, -1] - x[:, -2])
@@ -105,6 +123,6 @@ def _farther(model: Model, tau: Floats, scale: Floats, room: Floats, top: Floats
     x = 1.0 / (scale / (top * powers) + 1.0 / room)
     log_m = _by_side(model, tau, x)
     slope = np.diff(log_m, axis=1) / np.maximum(np.diff(x, axis=1), 1e-300)
-    enough = slope >= far[:, None]
+    enough = (slope >= far[:, None]) | (log_m[:, 1:] - x[:, 1:] * far[:, None] < NOTHING)
     at = np.where(enough.any(axis=1), np.minimum(np.argmax(enough, axis=1) + 2, _QUADRUPLINGS), _QUADRUPLINGS)
     return np.asarray(powers[at][:, None])

@@ -35,6 +35,7 @@ PLAIN_LIMIT = 4096
 SHARE = 0.02  # of the tolerance, for each of aliasing and truncation: leaves room for a value estimate off by 10
 ROUNDING = 200.0  # rounding units a row is assumed to lose at first; the reported bound uses the sums themselves
 MOST_ROWS = 16  # per side
+_HEAVY = 0.05  # of a unit in the exponent, from the forward to the farthest strike
 _EASY = 0.6  # of the loss allowed: within it, cost decides
 _LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 9, 10, 11, 12, 14)}))
 _STEP = 1.3  # ratio of the search grid for U
@@ -54,6 +55,7 @@ class Plan:
     k_high: Floats
     base: Ints  # first row of each side
     cuts: Floats  # strikes with |k| below the j-th cut of their side belong to a later row than base + j
+    last: Floats  # farther strikes of each side are worth less than exp(NOTHING)
     moments: SideMoments
 
 
@@ -76,10 +78,14 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
     count = tau.shape[0]
     moments = side_moments(model, tau, reach)
     used = reach.far >= 0.0
+    last = np.where(used, moments.last(reach.near, np.maximum(reach.far, 0.0)), -1.0)
+    reach = Reach(reach.near, last)
     sides = np.arange(2 * count)
     log_far = np.where(used, moments.log_value(sides, np.where(used, reach.far, 0.0)), np.inf)
     symmetric = log_far - 0.5 * np.maximum(reach.far, 0.0)  # what stands against the sum at p = 1/2
-    middle = symmetric > np.log(ROUNDING * EPS / tolerance)
+    room = np.concatenate([moments.high - 1.0, -moments.low])
+    heavy = used & (room * reach.far < _HEAVY)  # the tail has not begun to fall: such values are not small
+    middle = (symmetric > np.log(ROUNDING * EPS / tolerance)) | ~used | heavy
     single = middle[:count] & middle[count:]
     both = np.concatenate([single, single])
     wing = used & ~middle
@@ -115,7 +121,7 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
         wanted = cut * period / (2.0 * np.pi) + 2.0
     plain = wanted <= PLAIN_LIMIT
     nodes = np.where(plain, _LADDER[np.searchsorted(_LADDER, np.where(plain, wanted, 1.0))], 0)
-    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, base, cuts, moments)
+    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, base, cuts, last, moments)
 
 
 def cover_key(alone: int, cover: _Cover) -> Ints:

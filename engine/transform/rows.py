@@ -28,7 +28,7 @@ _MERGE = 1.6  # rows are given up to this many times the nodes they need when th
 @dataclass(frozen=True, slots=True)
 class Rows:
     """Rows of S slices, R in all, for K kernels. ``offset`` and ``length`` (R,) locate a row's grid in ``grid`` (K,
-    total); bent rows have length 0. ``base`` (2 S,) and ``cuts`` (2 S, C) as in the plan."""
+    total); bent rows have length 0. ``base``, ``last`` (2 S,) and ``cuts`` (2 S, C) as in the plan."""
 
     exponent: Floats
     period: Floats
@@ -36,6 +36,7 @@ class Rows:
     first: Ints  # first row of each slice, and R at the end: (S + 1,)
     base: Ints
     cuts: Floats
+    last: Floats
     offset: Ints
     length: Ints
     grid: Floats
@@ -79,7 +80,7 @@ def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Ro
     slices = plan.base.shape[0] // 2
     first = np.searchsorted(plan.slice_of, np.arange(slices + 1))
     return Rows(
-        plan.exponent, plan.period, nodes, first, plan.base, plan.cuts, offset[:-1], length, grid, log_scale,
+        plan.exponent, plan.period, nodes, first, plan.base, plan.cuts, plan.last, offset[:-1], length, grid, log_scale,
         rounding, slope, pieces, bent,
     )  # fmt: skip
 
@@ -108,8 +109,8 @@ def cut(rows: Rows, s: int) -> Rows:
     side = np.array([s, s + rows.base.shape[0] // 2])
     return Rows(
         rows.exponent[a:b], rows.period[a:b], rows.nodes[a:b], np.array([0, b - a]), rows.base[side] - a,
-        rows.cuts[side], rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(), rows.log_scale[a:b],
-        rows.rounding[:, a:b], rows.slope[:, a:b], rows.pieces[:, a:b],
+        rows.cuts[side], rows.last[side], rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(),
+        rows.log_scale[a:b], rows.rounding[:, a:b], rows.slope[:, a:b], rows.pieces[:, a:b],
         {r - a: parts for r, parts in rows.bent.items() if a <= r < b},
     )  # fmt: skip
 
@@ -131,6 +132,7 @@ def join(parts: list[Rows]) -> Rows:
         counts,
         np.array([[part.base[side] + counts[i] for i, part in enumerate(parts)] for side in (0, 1)]).ravel(),
         cuts.reshape(2 * len(parts), most),
+        np.concatenate([[part.last[side] for part in parts] for side in (0, 1)]),
         np.concatenate([part.offset + sizes[i] for i, part in enumerate(parts)]),
         np.concatenate([part.length for part in parts]),
         np.concatenate([part.grid for part in parts], axis=1),
