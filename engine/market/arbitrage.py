@@ -39,7 +39,7 @@ __all__ = ["butterfly", "calendar", "vertical"]
 
 _ROUNDING: Final = 32.0 * float(np.finfo(np.float64).eps)  # of the terms compared: products and sums of up to four
 _ROUNDS: Final = 8  # searches after setting the accused aside; what is still at odds then is accused as a whole
-_COMBINATIONS: Final = 1_000_000  # sellers x partners held at once; chains beyond lose the far partners, not the best
+_COMBINATIONS: Final = 500_000  # sellers x partners held at once; chains beyond lose other partners, not the best
 _CHORDS: Final = ((0, 0), (0, 1), (1, 0), (1, 1))  # steps left and right of the later strikes next to an earlier one
 
 
@@ -176,6 +176,8 @@ def _calendar_members(ladder: Ladder, years: Floats, uncertainties: Floats) -> I
     if waiting:
         best.append(_over_chords(ladder, np.concatenate(waiting), uncertainties))
     found = np.concatenate(best)
+    if len(found) * len(_CHORDS) > _COMBINATIONS:
+        return found
     late_of = ladder.expiries[found[:, 1]]
     near = [
         _chords(ladder, found[late_of == late, 0], _of(ladder, asked, late), steps=_CHORDS)
@@ -183,7 +185,10 @@ def _calendar_members(ladder: Ladder, years: Floats, uncertainties: Floats) -> I
     ]
     if not near:
         return found
-    return np.unique(np.concatenate([found, _over_chords(ladder, np.concatenate(near), uncertainties)]), axis=0)
+    chords = np.concatenate([found, _over_chords(ladder, np.concatenate(near), uncertainties)])
+    count = ladder.rows.size  # below two million, so that the number of a chord fits 63 bits
+    _, first = np.unique((chords[:, 0] * count + chords[:, 1]) * count + chords[:, 2], return_index=True)
+    return np.asarray(chords[first], dtype=np.int64)
 
 
 def _of(ladder: Ladder, positions: Ints, expiry: int) -> Ints:
