@@ -124,8 +124,9 @@ def _slopes(
         b_value, t1 - t2, t3 - t4 - curve, b_value * (u1 - u2), b_value * (u3 - u4), 64.0 * size_by_b, 64.0 * size_by_c
     )
     near = (np.abs(f.dt) < _NEAR) & (np.abs(b * tau) < _NEAR) & (np.abs(f.x) < 0.1)
-    return _by_series(found, near, q, b, sigma2=sigma2, tau=tau, kappa_theta=kappa_theta, v0=v0) if near.any() else
-    found
+    if not near.any():
+        return found
+    return _by_series(found, near, q, b, sigma2=sigma2, tau=tau, kappa_theta=kappa_theta, v0=v0)
 
 
 def _s_slope(f: FactorParts, tau: Any) -> Any:
