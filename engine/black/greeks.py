@@ -1,7 +1,7 @@
 """Derivatives of Black's undiscounted value per unit forward, in terms of ``k``, ``s`` and the expiry.
 
-Problem. With ``v = V / (discount_factor forward)`` the value of a call or a put, ``d1 = -k / s + s / 2`` and ``d2 =
-d1 - s``, all of the following are closed forms in ``d1``, ``d2``, ``phi(d1)`` and ``sqrt(expiry)``; Greeks with
+Problem. With ``v = V / (discount_factor forward)`` the value of a call or a put, ``d1 = -k / s + s / 2`` and
+``d2 = d1 - s``, all of the following are closed forms in ``d1``, ``d2``, ``phi(d1)`` and ``sqrt(expiry)``; Greeks with
 respect to spot, rates and time follow by the chain rule (``forward`` and ``discount_factor`` are functions of them),
 e.g. at fixed spot ``S`` and yield ``dV/dr = -expiry strike discount_factor strike_delta``.
 

@@ -7,12 +7,12 @@ From a table (``from_table``; below the point of inflexion, ``a`` up to a few un
     z = sqrt(2 ln(1 + a / (b sqrt(2 pi))))        so that        exp(z^2 / 2) - 1 = h exp(h^2 / 2) / M(h),
 
 ``h`` is a smooth function of ``z`` alone (``z^2 / 2`` at small, ``z`` at large ``z``), tabulated as
-``h (2 + z) / z^2``. What a finite ``t`` does is known at both ends. To order ``t^2`` (``engine.black.mills``) it changes
-the solution ``h`` at given ``z`` by the factor ``1 - r^2 kappa(h) / 8`` with ``r = a / h`` and
+``h (2 + z) / z^2``. What a finite ``t`` does is known at both ends. To order ``t^2`` (``engine.black.mills``) it
+changes the solution ``h`` at given ``z`` by the factor ``1 - r^2 kappa(h) / 8`` with ``r = a / h`` and
 ``kappa = (1 - h^2 M) / 3``. For large ``h``, on the other hand, ``b ~ exp(-(h^2 + t^2) / 2)``: what ``z`` gives is
-``H = sqrt(h^2 + t^2)``, and as ``h t = a / 2`` exactly, ``h = H sqrt((1 + sqrt(1 - q)) / 2)`` with ``q = r^2 / H^2`` and
-``r = a / H``. Since ``kappa -> 1 / h^2`` for large ``h``, this one formula with ``q = r^2 kappa`` does both. Relative
-error: below 1e-4 for ``s < 0.4``, some per cent at ``s = 3``.
+``H = sqrt(h^2 + t^2)``, and as ``h t = a / 2`` exactly, ``h = H sqrt((1 + sqrt(1 - q)) / 2)`` with
+``q = r^2 / H^2`` and ``r = a / H``. Since ``kappa -> 1 / h^2`` for large ``h``, this one formula with
+``q = r^2 kappa`` does both. Relative error: below 1e-4 for ``s < 0.4``, some per cent at ``s = 3``.
 
 From the normal quantile (``from_quantile``; elsewhere). With ``R = Y(p) / Y(|d|)`` and ``p^2 = d^2 + 2 a``, it holds
 exactly that ``c = Phi(-d) (1 - R)`` and ``1 - c = Phi(d) (1 + R)``. ``R`` varies slowly: it is taken from a first

@@ -1,8 +1,8 @@
 """Black volatilities from market prices, one status a quote.
 
 Problem. A price in the money is its intrinsic value plus the small time value that carries the volatility. With
-``u = price / discount_factor`` the time value is ``u - |forward - strike|``, by put-call parity the undiscounted value of
-the other payoff at that strike; taken naively it loses what the rounding of the products adds.
+``u = price / discount_factor`` the time value is ``u - |forward - strike|``, by put-call parity the undiscounted value
+of the other payoff at that strike; taken naively it loses what the rounding of the products adds.
 
 Trick. ``price - discount_factor |forward - strike|`` is taken exactly but for one rounding: the difference of forward
 and strike and its product with the discount factor are carried as unevaluated sums of two doubles (Knuth's two-sum,
