@@ -325,3 +325,21 @@ def test_negative_and_infinite_quotes_are_no_quotes():
     chain = ChainExpiry(0.5, [90.0, 100.0], [-1.0, 1.0], [math.inf, 1.2], [1.0, 1.0], [1.2, 1e300])
     assert math.isnan(chain.call_bids[0]) and math.isnan(chain.call_asks[0]) and math.isnan(chain.put_asks[1])
     assert chain.impossible == 3
+
+
+def test_bad_observations_that_agree_do_not_pass_for_noise():
+    """Forty observations, noise uniform in two intervals (deviation one), sixteen of them off by six deviations to the
+    same side: a scale taken from all residuals hides them; the deviations known beforehand do not."""
+    random = np.random.default_rng(1984)
+    positions = np.linspace(-30.0, 30.0, 40)
+    design = np.column_stack([np.ones(40), -positions])
+    scores, found = [], []
+    for _ in range(200):
+        values = random.uniform(-1.0, 1.0, (2, 40)).sum(axis=0) * math.sqrt(1.5)
+        bad = random.permutation(40)[:16]
+        values[bad] += 6.0
+        fit = robust_fit(design, values, np.ones(40))
+        scores.append(fit.coefficients[0] / math.sqrt(fit.covariance[0, 0]))
+        found.append(np.mean(~fit.kept[bad]))
+    assert np.mean(np.abs(scores) <= 2.0) >= 0.8
+    assert np.mean(found) >= 0.9
