@@ -41,6 +41,7 @@ _BLOCK = 4096  # quotes at a time: some twenty temporaries of this length stay i
 _ROUGH = 5e-5  # a step leaves C |f|^4 of s, where C <= 0.07, and <= 7 just above the inflexion: below 5e-17
 _TABLE_END = 4.0  # a from which the quantile gives the better guess
 _SMALLEST = float(np.finfo(np.float64).tiny)  # below it a double has lost digits: no time value to speak of
+_LEAST = 5e-324  # the smallest positive double
 _WIDEST = 1e6  # no two doubles have a ratio beyond e^1455
 _ROOT_2PI = math.sqrt(2.0 * math.pi)
 
@@ -64,7 +65,8 @@ def total_deviation(k: ArrayLike, value: ArrayLike) -> TotalDeviations:
     if k.shape != value.shape:
         k, value = np.broadcast_arrays(k, value)
     with np.errstate(all="ignore"):
-        return _deviations(np.abs(k), value / np.exp(np.minimum(k, 0.0)))
+        bound = np.maximum(np.exp(np.minimum(k, 0.0)), _LEAST)  # not 0, so that a zero value stays one
+        return _deviations(np.abs(k), value / bound)
 
 
 def normalised_deviation(a: Floats, c: Floats) -> TotalDeviations:
