@@ -12,7 +12,6 @@ More sets, in as many processes as wanted, with the result printed:
 
 from __future__ import annotations
 
-import math
 import sys
 from collections.abc import Sequence
 from concurrent.futures import ProcessPoolExecutor
@@ -23,7 +22,7 @@ import pytest
 from hypothesis import assume, given, settings
 
 from tests.properties.parameter_sets import DIMENSIONS, expiry, pair, twins, unit_cube
-from tests.properties.verdict import Verdict, judge
+from tests.properties.verdict import Verdict, judge, quotes
 
 QUICK_SETS = 200
 LONG_SETS = 5000
@@ -32,14 +31,14 @@ COORDINATES = DIMENSIONS["heston"] + 5
 
 
 def _judge_one(u: Sequence[float]) -> Verdict:
-    """One set: the default tolerance with the relative demand, then a drawn one for the bound alone."""
+    """One set: the default tolerance with the relative demand, then a drawn one for the bounds alone."""
     model, twin = pair("heston", u[:-5])
     tau, inner, near = expiry(u[-5]), 6.0 * u[-4], u[-3]
     if not float(model.mean_variance(tau)) > 0.0:
         return Verdict()  # no randomness at all: nothing to transform
-    out = judge(model, twin, tau, [-6.0, -inner, -near, 0.0, near, inner, 6.0], tolerance=1e-10, relative=1e-9)
-    middle = 12.0 * u[-2] - 6.0
-    out.add(judge(model, twin, tau, [-6.0, middle, 6.0], tolerance=10.0 ** (-6.0 - 6.0 * u[-1])))
+    asked = quotes(model, twin, tau, [-6.0, -inner, -near, 0.0, 12.0 * u[-2] - 6.0, near, inner, 6.0])
+    out = judge(model, asked, tolerance=DEFAULT_TOLERANCE, relative=1e-9)
+    out.add(judge(model, asked, tolerance=10.0 ** (-6.0 - 6.0 * u[-1])))
     out.smiles = 1
     return out
 
@@ -114,11 +113,10 @@ HARD = [
 def test_hard_sets(values: tuple[float, ...], tau: float) -> None:
     names = ("v0", "kappa", "theta", "sigma", "rho")
     model, twin = twins("heston", dict(zip(names, values, strict=True)))
-    tally = Verdict()
-    for tolerance in (1e-10, 1e-6, 1e-12):
-        relative = 1e-9 if tolerance == 1e-10 else math.inf
-        distances = [-6.0, -2.5, -1.0, -0.1, 0.0, 0.3, 1.0, 3.0, 6.0]
-        tally.add(judge(model, twin, tau, distances, tolerance=tolerance, relative=relative, digitals=True))
+    asked = quotes(model, twin, tau, [-6.0, -2.5, -1.0, -0.1, 0.0, 0.3, 1.0, 6.0], digitals=True)
+    tally = judge(model, asked, tolerance=DEFAULT_TOLERANCE, relative=1e-9)
+    for tolerance in (1e-6, 1e-12):
+        tally.add(judge(model, asked, tolerance=tolerance))
     assert not tally.faults, "\n".join(tally.faults)
 
 

@@ -21,7 +21,7 @@ from tests.reference.mp_models import reference_model
 from tests.reference.mp_prices import log_moments, moment_strip
 
 EPS = float(np.finfo(np.float64).eps)
-SETS = 40
+SETS = 24
 CASES = [(name, seed) for name in MODELS for seed in range(SETS)]
 each_case = pytest.mark.parametrize(("name", "seed"), CASES)
 
@@ -89,14 +89,17 @@ def test_no_branch_jump_along_u(name: str, seed: int) -> None:
 @each_case
 def test_strip_is_inside_the_true_one(name: str, seed: int) -> None:
     case = Case(name, seed)
-    low, high = moment_strip(case.twin, case.tau)
-    for found, exact, beyond in ((-case.low, -low, 0), (case.high, high, 1)):
-        if math.isinf(found):
-            assert float(exact) > 1e12, (case.model, case.tau)
-            continue
-        assert gmpy2.mpfr(found) <= exact, (case.model, case.tau, found, float(exact))
-        if found - beyond > 1e-6:
-            assert found - beyond >= 0.99 * float(exact - beyond), (case.model, case.tau)
+    exact_low, exact_high = moment_strip(case.twin, case.tau)
+    hard = 1.0 - abs(getattr(case.model, "rho", 0.0)) < 1e-6  # there the edge hangs on the last digits of rho
+    for precise, accuracy in ((False, 2e-3), (True, 1e-7 if hard else 1e-12)):
+        low, high = (float(np.reshape(edge, -1)[0]) for edge in case.model.strip(case.tau, precise=precise))
+        for found, exact, beyond in ((-low, -exact_low, 0), (high, exact_high, 1)):
+            if math.isinf(found):
+                assert float(exact) > 1e12, (case.model, case.tau)
+                continue
+            assert gmpy2.mpfr(found) <= exact, (case.model, case.tau, found, float(exact))
+            if found - beyond > 1e-3:  # nearer to 1 the double itself is coarser than that
+                assert found - beyond >= (1.0 - accuracy) * float(exact - beyond), (case.model, case.tau)
     for found, beyond in ((case.low, 0.0), (case.high, 1.0)):
         if math.isfinite(found):
             inside = beyond + (found - beyond) * np.array([0.5, 0.9, 0.999, 1.0 - 1e-6])

@@ -7,6 +7,7 @@ nodes, ``deformed`` bends every row. Inequalities (monotone, convex) are allowed
 from __future__ import annotations
 
 import math
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -16,11 +17,11 @@ from engine import MODELS, Payoff, PricedSlice, Slice, Status, price_smiles
 from engine.models.heston import Heston
 from engine.transform import plan, plan_cache
 from tests.properties.parameter_sets import DIMENSIONS, expiry, pair
-from tests.properties.verdict import Verdict, judge
+from tests.properties.verdict import Quotes, Verdict, judge, quotes
 
 EPS = float(np.finfo(np.float64).eps)
 HOUR = 1.0 / 8760.0
-SEEDS = range(5)
+SEEDS = range(4)
 LIMITS = {"planned": plan.PLAIN_LIMIT, "plain": 60_000, "deformed": 0}
 over_models = pytest.mark.parametrize("name", list(MODELS))
 over_seeds = pytest.mark.parametrize("seed", SEEDS)
@@ -45,6 +46,14 @@ def _case(name: str, seed: int) -> tuple[Any, Any, float]:
             return model, twin, tau
 
 
+@cache
+def _quotes(name: str, seed: int) -> tuple[Any, Quotes]:
+    """Quotes as far as ten standard deviations, digital ones too; the same for every contour."""
+    model, twin, tau = _case(name, seed)
+    inner = np.random.default_rng([seed, 5]).uniform(-5.0, 5.0, 3)
+    return model, quotes(model, twin, tau, [-10.0, *inner, 0.0, 10.0], digitals=True)
+
+
 def _strikes(model: Any, tau: float, distances: np.ndarray, forward: float = 100.0) -> np.ndarray:
     return forward * np.exp(math.sqrt(float(np.reshape(model.mean_variance(tau), -1)[0])) * distances)
 
@@ -61,13 +70,23 @@ def _payoffs(strikes: np.ndarray, payoff: Payoff) -> np.ndarray:
 @over_models
 @over_seeds
 def test_bound_covers_the_error(name: str, seed: int, contour: str) -> None:
-    model, twin, tau = _case(name, seed)
-    rng = np.random.default_rng([seed, 5])
+    model, asked = _quotes(name, seed)
     tally = Verdict()
-    for tolerance in (1e-10, 10.0 ** rng.uniform(-12.0, -4.0)):
-        inner = rng.uniform(-5.0, 5.0, 3)
-        tally.add(judge(model, twin, tau, [-10.0, *inner, 0.0, 10.0], tolerance=tolerance, digitals=True))
+    for tolerance in (1e-10, float(10.0 ** np.random.default_rng(seed).uniform(-12.0, -4.0))):
+        tally.add(judge(model, asked, tolerance=tolerance))
     assert not tally.faults, "\n".join(tally.faults)
+
+
+@pytest.mark.long
+@over_models
+def test_bound_covers_the_error_at_length(name: str, contour: str) -> None:
+    tally = Verdict()
+    for seed in range(100, 500):
+        model, asked = _quotes(name, seed)
+        plan_cache.clear()
+        tally.add(judge(model, asked, tolerance=float(10.0 ** np.random.default_rng(seed).uniform(-12.0, -4.0))))
+    print(f"{name} on {contour} contours: {tally}")
+    assert not tally.faults, "\n".join(tally.faults[:20])
 
 
 @over_models

@@ -15,7 +15,7 @@ from engine.smile import Slice, price_smiles
 from engine.status import Payoff
 from tests.reference.mp_prices import otm_digitals, otm_values
 
-__all__ = ["FORWARD", "Verdict", "judge"]
+__all__ = ["FORWARD", "Quotes", "Verdict", "judge", "quotes"]
 
 FORWARD = 100.0
 LEAST = gmpy2.mpfr("1e-200")  # of the forward: above it the relative error is judged
@@ -49,21 +49,22 @@ class Verdict:
         )
 
 
-def judge(
-    model: Any,
-    twin: Any,
-    tau: float,
-    distances: Sequence[float],
-    *,
-    tolerance: float,
-    relative: float = math.inf,
-    digitals: bool = False,
-    digits: int = 20,
-) -> Verdict:
-    """Price one smile at ``distances`` (standard deviations from the forward) and compare every number.
+@dataclass(frozen=True)
+class Quotes:
+    """Strikes and payoffs of one smile, and what they are worth by the reference (FORWARD, no discounting)."""
 
-    ``twin`` is the reference's model. A fault: an error above the stated bound, or above ``relative`` where the value
-    is larger than LEAST of the forward. The reference takes the strikes as the exact doubles they are.
+    tau: float
+    strikes: np.ndarray
+    payoffs: np.ndarray
+    exact: list[Any]
+
+
+def quotes(
+    model: Any, twin: Any, tau: float, distances: Sequence[float], *, digitals: bool = False, digits: int = 20
+) -> Quotes:
+    """Out-of-the-money quotes at ``distances`` in standard deviations from the forward, digital ones too on request.
+
+    ``twin`` is the reference's model of the same parameters; it takes the strikes as the exact doubles they are.
     """
     spread = math.sqrt(float(np.reshape(model.mean_variance(tau), -1)[0]))
     strikes = FORWARD * np.exp(spread * np.asarray(distances))
@@ -73,28 +74,38 @@ def judge(
         exact += otm_digitals(twin, tau, FORWARD, strikes, digits=digits)
         binary = np.where(strikes >= FORWARD, Payoff.DIGITAL_CALL, Payoff.DIGITAL_PUT).astype(np.uint8)
         payoffs, strikes = np.concatenate([payoffs, binary]), np.concatenate([strikes, strikes])
-    one = Slice(tau, FORWARD, 1.0, strikes, payoffs)
+    return Quotes(tau, strikes, payoffs, exact)
+
+
+def judge(model: Any, asked: Quotes, *, tolerance: float, relative: float = math.inf) -> Verdict:
+    """Price one smile and compare every number.
+
+    A fault: an error above the stated bound, or above ``relative`` where the value is larger than LEAST of the
+    forward, or any exception or warning on the way.
+    """
     out = Verdict(smiles=1)
+    one = Slice(asked.tau, FORWARD, 1.0, asked.strikes, asked.payoffs)
     try:
         with warnings.catch_warnings(action="error"):
             found = price_smiles(model, [one], tolerance=tolerance, implied_vols=False)[0]
     except (ArithmeticError, RuntimeWarning, LookupError, ValueError) as fault:  # counted like a wrong price
-        out.faults.append(f"{model} tau={tau!r} strikes={strikes.tolist()} tolerance={tolerance!r}: {fault!r}")
+        where = f"tau={asked.tau!r} strikes={asked.strikes.tolist()} tolerance={tolerance!r}"
+        out.faults.append(f"{model} {where}: {fault!r}")
         return out
-    for i, true in enumerate(exact):
+    for i, true in enumerate(asked.exact):
         price, bound = float(found.prices[i]), float(found.error_bounds[i])
         with gmpy2.context(gmpy2.get_context(), precision=160):
             error = abs(gmpy2.mpfr(price) - true)
             ratio = float(error / gmpy2.mpfr(bound)) if bound > 0.0 else (0.0 if error == 0 else math.inf)
-            worth = true > (LEAST * FORWARD if payoffs[i] == Payoff.OTM else LEAST)
+            worth = true > (LEAST * FORWARD if asked.payoffs[i] == Payoff.OTM else LEAST)
             share = float(error / true) if worth else 0.0
         out.prices += 1
         out.judged += int(worth)
         out.relative, out.ratio = max(out.relative, share), max(out.ratio, ratio)
         if not ratio <= 1.0 or not share <= relative:
             out.faults.append(
-                f"{Payoff(found.payoffs[i]).word} {model} tau={tau!r} strike={float(strikes[i])!r} forward={FORWARD} "
-                f"tolerance={tolerance!r}: {price!r} is off by {float(error):.3g}, stated bound {bound:.3g} "
-                f"(ratio {ratio:.3g}), relative {share:.3g}; {found.transform}"
+                f"{Payoff(found.payoffs[i]).word} {model} tau={asked.tau!r} strike={float(asked.strikes[i])!r} "
+                f"forward={FORWARD} tolerance={tolerance!r}: {price!r} is off by {float(error):.3g}, stated bound "
+                f"{bound:.3g} (ratio {ratio:.3g}), relative {share:.3g}; {found.transform}"
             )
     return out

@@ -6,7 +6,8 @@ Everything here speaks ``M(w) = E[exp(w X)]`` with ``X = ln(S_T / F)`` and compl
 - ``log_moment(w, near)``: ``log M(w)`` in the closed upper half plane; ``near`` is the state handed back by the
   previous node of a path that starts on the real axis (``None`` on the axis itself), so that a complex logarithm is
   continued along the path and never read off its principal branch;
-- ``edges()``: the open interval of finite moments, to full precision;
+- ``edges(bits=None)``: the open interval of finite moments from inside, to full precision or, where a search is needed,
+  to the bits asked for;
 - ``slope()``: the ``s`` in ``log M(w) ~ s w`` as ``|w|`` grows in the upper half plane (``None``: Gaussian decay);
 - ``sector``: the open range of angles of ``w`` in which a contour may be bent;
 - ``extra_digits()``: decimal digits lost to cancellation inside the formulas.
@@ -69,7 +70,7 @@ class _Gaussian:
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         return self.variance / 2 * w * (w - 1), None
 
-    def edges(self) -> tuple[Any, Any]:
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
         return -INF, INF
 
     def slope(self) -> Any:
@@ -176,10 +177,11 @@ class _HestonAt:
             return -2 / b
         return gmpy2.log((d - b) ** 2 / (self.variance * c)) / d
 
-    def edges(self) -> tuple[Any, Any]:
-        return -self._edge(lambda t: -t), 1 + self._edge(lambda t: 1 + t)
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
+        bits = bits or gmpy2.get_context().precision
+        return -self._edge(lambda t: -t, bits), 1 + self._edge(lambda t: 1 + t, bits)
 
-    def _edge(self, place: Any) -> Any:
+    def _edge(self, place: Any, bits: int) -> Any:
         """Distance from the unit interval at which the explosion time drops to ``tau``."""
         low = high = mpfr(1)
         while self.explosion_time(place(low)) <= self.tau:
@@ -190,7 +192,6 @@ class _HestonAt:
             high *= 16
             if high > mpfr("1e60"):
                 return high
-        bits = gmpy2.get_context().precision
         for _ in range(bits + 30):
             middle = (low + high) / 2 if high < 2 * low else gmpy2.sqrt(low * high)
             if self.explosion_time(place(middle)) > self.tau:
@@ -275,7 +276,7 @@ class _GaussianJumps:
             return mpc(0), None
         return self.count * (gmpy2.exp(w * (self.mean + self.half * w)) - 1 - self.compensator * w), None
 
-    def edges(self) -> tuple[Any, Any]:
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
         return -INF, INF
 
     def slope(self) -> Any:
@@ -301,8 +302,8 @@ class _Sum:
             states.append(state)
         return total, tuple(states)
 
-    def edges(self) -> tuple[Any, Any]:
-        pairs = [part.edges() for part in self.parts]
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
+        pairs = [part.edges(bits=bits) for part in self.parts]
         return max(pair[0] for pair in pairs), min(pair[1] for pair in pairs)
 
     def slope(self) -> Any:
@@ -338,7 +339,7 @@ class _VarianceGammaAt:
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         return self.drift * w - self.power * gmpy2.log(1 - w * (self.linear + self.square * w)), None
 
-    def edges(self) -> tuple[Any, Any]:
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
         root = gmpy2.sqrt(self.linear**2 + 4 * self.square)
         return -2 / (root - self.linear), 2 / (root + self.linear)
 
@@ -373,7 +374,7 @@ class _NormalInverseGaussianAt:
         root = gmpy2.sqrt((self.alpha - self.beta - w) * (self.alpha + self.beta + w))
         return self.drift * w + self.scale * (self.gamma - root), None
 
-    def edges(self) -> tuple[Any, Any]:
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
         return -self.alpha - self.beta, self.alpha - self.beta
 
     def slope(self) -> Any:
@@ -411,7 +412,7 @@ class _ExponentialJumps:
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         return self.count * (self._jump(w) - 1 - self.compensator * w), None
 
-    def edges(self) -> tuple[Any, Any]:
+    def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
         return -self.rate_down, self.rate_up
 
     def slope(self) -> Any:

@@ -39,6 +39,7 @@ __all__ = [
 ]
 
 NEGLIGIBLE = 1000
+EDGE_BITS = 30  # of the distance from 0 or 1: a contour keeps well away from the edges
 HALVINGS = 9
 NODES = 60_000
 
@@ -83,7 +84,7 @@ def otm_values(model: Any, tau: float, forward: float, strikes: Sequence[float],
     """
     with _precise(_bits(model, tau, digits)):
         at = model.prepare(tau)
-        edges = at.edges()
+        edges = at.edges(bits=EDGE_BITS)
         return [_vanilla(at, edges, log_strike(strike, forward), strike >= forward, digits) for strike in strikes]
 
 
@@ -91,7 +92,7 @@ def otm_digitals(model: Any, tau: float, forward: float, strikes: Sequence[float
     """Undiscounted probability of the out-of-the-money side: above where ``strike >= forward``, else below."""
     with _precise(_bits(model, tau, digits)):
         at = model.prepare(tau)
-        edges = at.edges()
+        edges = at.edges(bits=EDGE_BITS)
         return [_digital(at, edges, log_strike(strike, forward), strike >= forward, digits) for strike in strikes]
 
 
@@ -102,7 +103,7 @@ def otm_value(model: Any, tau: Any, k: Any, *, digits: int = 20, lean: float = 1
     """
     with _precise(_bits(model, tau, digits)):
         at = model.prepare(tau)
-        return _vanilla(at, at.edges(), mpfr(k), k >= 0, digits, lean)
+        return _vanilla(at, at.edges(bits=EDGE_BITS), mpfr(k), k >= 0, digits, lean)
 
 
 def _vanilla(at: Any, edges: tuple[Any, Any], k: Any, call: bool, digits: int, lean: float = 1.0) -> Any:
@@ -120,7 +121,7 @@ def digital(model: Any, tau: Any, k: Any, *, above: bool, digits: int = 20) -> A
     """``P(X > k)`` or, with ``above=False``, ``P(X < k)``, undiscounted, to relative digits."""
     with _precise(_bits(model, tau, digits)):
         at = model.prepare(tau)
-        return _digital(at, at.edges(), mpfr(k), above, digits)
+        return _digital(at, at.edges(bits=EDGE_BITS), mpfr(k), above, digits)
 
 
 def _digital(at: Any, edges: tuple[Any, Any], k: Any, above: bool, digits: int) -> Any:
