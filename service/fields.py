@@ -3,11 +3,14 @@ do not know."""
 
 from __future__ import annotations
 
-from typing import Annotated, Any
+from typing import Annotated, Any, Final
 
 from pydantic import BaseModel, ConfigDict, Field
 
-__all__ = ["Answer", "Asked", "Finite", "Positives", "described"]
+__all__ = ["Answer", "Asked", "PRICE_RANGE", "Finite", "Strikes", "described"]
+
+PRICE_RANGE: Final = (1e-12, 1e15)
+"""Spot, forward and strikes: what the engine admits for a forward; beyond it arithmetic runs out, not markets."""
 
 
 class Asked(BaseModel):
@@ -30,4 +33,7 @@ def described(text: str, *, unit: str, example: Any, default: Any = ..., **limit
 # The first bad value ends the reading of a column, so that a large one full of faults costs no more than a good one;
 # small bodies are read again to the end for a full list (``service.validation``).
 Finite = Annotated[float, Field(allow_inf_nan=False)]
-Positives = Annotated[list[Annotated[float, Field(gt=0.0, allow_inf_nan=False)]], Field(min_length=1, fail_fast=True)]
+Strikes = Annotated[
+    list[Annotated[float, Field(ge=PRICE_RANGE[0], le=PRICE_RANGE[1], allow_inf_nan=False)]],
+    Field(min_length=1, fail_fast=True),
+]

@@ -7,7 +7,7 @@ from typing import Annotated, Any, Final, Literal, TypeAlias
 
 from pydantic import Field
 
-from service.fields import Answer, Asked, Finite, Positives, described
+from service.fields import Answer, Asked, Finite, Strikes, described
 from service.terms.schemas import DISCOUNT_LIMITS, FORWARD_LIMITS, DayCount, QuotedExpiry
 
 __all__ = ["EXAMPLE", "ChainAnswer", "ChainAsked", "ChainExpiryAsked"]
@@ -58,7 +58,7 @@ class ChainExpiryAsked(Asked):
         unit="years, or date YYYY-MM-DD",
         example="2026-09-18",
     )
-    strikes: Positives = described(
+    strikes: Strikes = described(
         "Strikes in any order, repeats allowed; answers keep the order.",
         unit="price of one underlying",
         example=[95.0, 100.0],

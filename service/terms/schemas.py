@@ -8,7 +8,7 @@ from typing import Annotated, Any, Final, Literal, TypeAlias
 from pydantic import Discriminator, Field, Tag
 
 from engine import EXPIRY_RANGE
-from service.fields import Answer, Asked, Positives, described
+from service.fields import PRICE_RANGE, Answer, Asked, Strikes, described
 
 __all__ = [
     "DISCOUNT_LIMITS",
@@ -31,8 +31,8 @@ DayCount: TypeAlias = Literal["ACT/365F", "ACT/360", "ACT/ACT"]
 AnyPayoff: TypeAlias = Literal["call", "put", "otm", "digital_call", "digital_put"]
 VanillaPayoff: TypeAlias = Literal["call", "put", "otm"]
 LATEST: Final = EXPIRY_RANGE[1]
-FORWARD_RANGE: Final = (1e-12, 1e15)  # as the engine admits it
-DISCOUNT_RANGE: Final = (1e-12, 1e3)  # likewise
+FORWARD_RANGE: Final = PRICE_RANGE
+DISCOUNT_RANGE: Final = (1e-12, 1e3)  # as the engine admits it
 FORWARD_LIMITS: Final = {"ge": FORWARD_RANGE[0], "le": FORWARD_RANGE[1]}
 DISCOUNT_LIMITS: Final = {"ge": DISCOUNT_RANGE[0], "le": DISCOUNT_RANGE[1]}
 
@@ -85,7 +85,7 @@ class SliceAsked(Asked):
         default=None,
         **DISCOUNT_LIMITS,
     )
-    strikes: Positives = described(
+    strikes: Strikes = described(
         "Strikes in any order, repeats allowed; answers keep the order.",
         unit="price of one underlying",
         example=[80.0, 100.0, 120.0],

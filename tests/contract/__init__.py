@@ -1,0 +1,1 @@
+"""The HTTP contract, checked from outside through HTTP alone."""
