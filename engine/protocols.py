@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import ClassVar, Protocol, Self
+from typing import Any, ClassVar, Protocol, Self
 
 from engine.arrays import Complexes, Floats, Ints
 
@@ -104,6 +104,11 @@ class Model(Protocol):
 
     def mean_variance(self, tau: Floats | float) -> Floats:
         """The expected quadratic variation over ``tau``: the scale of the density, squared."""
+        ...
+
+    def variance_weights(self) -> list[tuple[int, Any]]:
+        """Per variance factor: the place of its ``v0`` among the sensitivities, and ``w rho sigma`` with ``w`` its
+        share of the instantaneous variance; empty where there is none."""
         ...
 
     def bend(self, tau: float) -> tuple[float, float]:

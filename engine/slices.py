@@ -18,13 +18,15 @@ EXPIRY_RANGE = (1.0 / (365.0 * 24.0), 50.0)  # years: one hour to fifty years, t
 @dataclass(frozen=True, slots=True)
 class Slice:
     """One expiry. ``expiry`` in years; ``forward`` and ``discount_factor`` > 0; ``strikes`` float64 (n,) > 0 in the
-    unit of the forward; ``payoffs`` uint8 (n,) codes of ``Payoff``."""
+    unit of the forward; ``payoffs`` uint8 (n,) codes of ``Payoff``. ``spot``: if given, Greeks are with respect to
+    it, and the forward's growth from it gives the carry that theta holds fixed."""
 
     expiry: float
     forward: float
     discount_factor: float
     strikes: Floats
     payoffs: Bytes
+    spot: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -13,25 +13,34 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from scipy.special import ndtr
 
 from engine.arrays import Bytes, Floats
-from engine.black import otm_value, total_deviation
+from engine.black import total_deviation
 from engine.errors import InputError
-from engine.models.black import Black
 from engine.moneyness import log_moneyness
 from engine.protocols import Model
 from engine.slices import Batch, Slice, side_by_side
 from engine.status import Payoff, Status
-from engine.transform.inversion import Contour, invert
-from engine.transform.kernels import DIGITAL, VANILLA, Kernel
-from engine.transform.reach import Strikes
+from engine.transform.inversion import Contour
+from engine.transform.kernels import DIGITAL, VANILLA
+from engine.values import Group, kernel_values
 
-__all__ = ["PricedSlice", "TransformReport", "price_smiles"]
+__all__ = [
+    "TOLERANCE_RANGE",
+    "PricedSlice",
+    "Sides",
+    "TransformReport",
+    "assemble_prices",
+    "check_models",
+    "price_smiles",
+    "sides_of",
+]
 
 TOLERANCE_RANGE = (1e-14, 1e-2)
 NODE_LIMIT = 4_000_000
 _EPS = float(np.finfo(np.float64).eps)
+_CALL, _PUT, _OTM, _DIGITAL_CALL = (int(p) for p in (Payoff.CALL, Payoff.PUT, Payoff.OTM, Payoff.DIGITAL_CALL))
+_OK, _TOLERANCE_NOT_MET = int(Status.OK), int(Status.TOLERANCE_NOT_MET)
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,17 +66,6 @@ class PricedSlice:
     transform: TransformReport
 
 
-@dataclass(frozen=True, slots=True)
-class _Otm:
-    """Out-of-the-money values per unit forward and probabilities with bounds, (n,), and a report per slice."""
-
-    value: Floats
-    bound: Floats
-    digital: Floats
-    digital_bound: Floats
-    reports: list[TransformReport]
-
-
 def price_smiles(
     models: Model | Sequence[Model],
     slices: Sequence[Slice],
@@ -82,106 +80,86 @@ def price_smiles(
     covers the error. Raises InputError (argument, index, allowed range) for inputs outside the admissible ranges, and
     RefusedError when the batch would need more than ``node_limit`` transform nodes.
     """
-    if not TOLERANCE_RANGE[0] <= tolerance <= TOLERANCE_RANGE[1]:
-        raise InputError("tolerance", f"is {tolerance!r}", allowed=f"{TOLERANCE_RANGE[0]:g} to {TOLERANCE_RANGE[1]:g}")
-    if not slices:
-        raise InputError("slices", "is empty", allowed="at least one slice")
-    per_slice = list(models) if isinstance(models, Sequence) else [models] * len(slices)
-    if len(per_slice) != len(slices):
-        raise InputError("models", f"has {len(per_slice)} models", allowed=f"one or {len(slices)}")
-    for model in {id(m): m for m in per_slice}.values():
-        model.check()
+    per_slice = check_models(models, len(slices), tolerance)
     batch = side_by_side(slices)
     k = log_moneyness(batch.strikes, batch.forward[batch.slice_of])
-    digital = bool(np.any(batch.payoffs >= Payoff.DIGITAL_CALL))
-    otm = _values(per_slice, batch, k, tolerance, digital, node_limit)
-    return _answers(batch, k, otm, tolerance, implied_vols)
+    kernels = [VANILLA, DIGITAL] if bool((batch.payoffs >= _DIGITAL_CALL).any()) else [VANILLA]
+    groups = kernel_values(
+        per_slice, batch, k, kernels_of=lambda _: kernels, tolerance=tolerance, node_limit=node_limit
+    )
+    return assemble_prices(batch, k, groups, tolerance=tolerance, implied_vols=implied_vols)
 
 
-def _values(models: list[Model], batch: Batch, k: Floats, tolerance: float, digital: bool, node_limit: int) -> _Otm:
-    """Out-of-the-money values, one batch per kind of model."""
-    n = k.shape[0]
-    kernels = [VANILLA, DIGITAL] if digital else [VANILLA]
-    value, bound = np.zeros((len(kernels), n)), np.zeros((len(kernels), n))
-    reports: list[Any] = [None] * len(models)
-    kinds: dict[Any, list[int]] = {}
-    for i, model in enumerate(models):
-        kinds.setdefault(type(model), []).append(i)
-    for kind, members in kinds.items():
-        index = np.array(members)
-        stacked = kind.stack([models[i] for i in members])
-        variance = np.reshape(stacked.mean_variance(batch.expiry[index][:, None]), -1)
-        closed = (variance == 0.0) | (kind is Black)
-        if closed.any():
-            mine = index[closed]
-            at, s = batch.points(mine), np.sqrt(variance[closed])
-            value[:, at], bound[:, at] = _closed_form(kernels, k[at], np.repeat(s, batch.lengths[mine]))
-            for i in mine:
-                reports[i] = TransformReport("closed_form", (), 0)
-        if not closed.all():
-            mine = index[~closed]
-            at = batch.points(mine)
-            lengths = batch.lengths[mine]
-            strikes = Strikes(k[at], np.repeat(np.arange(mine.shape[0]), lengths), np.cumsum(lengths) - lengths)
-            found = invert(
-                stacked.take(np.flatnonzero(~closed)) if closed.any() else stacked,
-                batch.expiry[mine][:, None],
-                strikes,
-                tolerance=tolerance,
-                kernels=kernels,
-                limit=node_limit,
-            )
-            value[:, at], bound[:, at] = found.value, found.bound
-            for i, contour in zip(mine, found.contours, strict=True):
-                reports[i] = _report(contour)
-    return _Otm(value[0], bound[0], value[-1], bound[-1], reports)
+def check_models(models: Model | Sequence[Model], count: int, tolerance: float) -> list[Model]:
+    """One checked model per slice; raises InputError for a tolerance, a count or a parameter out of range."""
+    if not TOLERANCE_RANGE[0] <= tolerance <= TOLERANCE_RANGE[1]:
+        raise InputError("tolerance", f"is {tolerance!r}", allowed=f"{TOLERANCE_RANGE[0]:g} to {TOLERANCE_RANGE[1]:g}")
+    if count == 0:
+        raise InputError("slices", "is empty", allowed="at least one slice")
+    per_slice = list(models) if isinstance(models, Sequence) else [models] * count
+    if len(per_slice) != count:
+        raise InputError("models", f"has {len(per_slice)} models", allowed=f"one or {count}")
+    for model in {id(m): m for m in per_slice}.values():
+        model.check()
+    return per_slice
 
 
-def _report(contour: Contour) -> TransformReport:
+def _report(contour: Contour | None) -> TransformReport:
+    if contour is None:
+        return TransformReport("closed_form", (), 0)
     words = [w for w, on in (("contour_fft", not contour.bent.all()), ("deformed_contour", contour.bent.any())) if on]
     return TransformReport("+".join(words), tuple(contour.exponents.tolist()), int(contour.nodes.sum()))
 
 
-def _closed_form(kernels: list[Kernel], k: Floats, s: Floats) -> tuple[Floats, Floats]:
-    """Black's formula and its rounding bound: the value's condition in ``k`` and ``s`` times a few units. (K, n)
-    each."""
-    with np.errstate(divide="ignore", invalid="ignore"):
-        d = -np.abs(k) / s
-        d2 = np.where(s > 0.0, d - 0.5 * np.sign(k + (k == 0.0)) * s, -np.inf)
-    steep = np.where(s > 0.0, d * d + 0.25 * s * s, 0.0)
-    value = np.stack([otm_value(k, s), ndtr(d2)][: len(kernels)])
-    units = np.stack([16.0 + 8.0 * steep, 16.0 + 8.0 * (steep + np.abs(k))][: len(kernels)])
-    return value, value * _EPS * units + np.finfo(np.float64).tiny
+def assemble_prices(
+    batch: Batch, k: Floats, groups: Sequence[Group], *, tolerance: float, implied_vols: bool
+) -> list[PricedSlice]:
+    """Forward, discounting, parity, digitals and implied volatilities put back; columns cut into slices again.
 
-
-def _answers(batch: Batch, k: Floats, otm: _Otm, tolerance: float, implied_vols: bool) -> list[PricedSlice]:
-    """Forward, discounting, parity, digitals and implied volatilities put back; columns cut into slices again."""
-    forward = batch.forward[batch.slice_of]
-    discount = batch.discount[batch.slice_of]
-    otm_call = batch.strikes >= forward
-    resolved = np.where(batch.payoffs == Payoff.OTM, np.where(otm_call, Payoff.CALL, Payoff.PUT), batch.payoffs)
-    is_call = (resolved == Payoff.CALL) | (resolved == Payoff.DIGITAL_CALL)
-    is_digital = resolved >= Payoff.DIGITAL_CALL
-    in_money = is_call != otm_call
-    intrinsic = np.where(in_money, np.abs(forward - batch.strikes), 0.0)
-    vanilla = otm.value * forward + intrinsic
-    vanilla_bound = otm.bound * forward
-    probability = np.where(in_money, 1.0 - otm.digital, otm.digital)
-    prices = discount * np.where(is_digital, probability, vanilla)
-    bounds = discount * np.where(is_digital, otm.digital_bound, vanilla_bound) + 4.0 * _EPS * prices
+    The kernels of every group begin with the vanilla; a digital, where payoffs ask for one, is among them.
+    """
+    value, bound, p_value, p_bound = (np.zeros(k.shape) for _ in range(4))
+    reports: dict[int, TransformReport] = {}
+    for group in groups:
+        value[group.at], bound[group.at] = group.value[0], group.bound[0]
+        if DIGITAL in group.kernels:
+            row = group.kernels.index(DIGITAL)
+            p_value[group.at], p_bound[group.at] = group.value[row], group.bound[row]
+        reports.update({int(i): _report(c) for i, c in zip(group.members, group.contours, strict=True)})
+    forward, discount = batch.forward[batch.slice_of], batch.discount[batch.slice_of]
+    sides = sides_of(batch)
+    intrinsic = np.where(sides.in_money, np.abs(forward - batch.strikes), 0.0)
+    probability = np.where(sides.in_money, 1.0 - p_value, p_value)
+    prices = discount * np.where(sides.digital, probability, value * forward + intrinsic)
+    bounds = discount * np.where(sides.digital, p_bound, bound * forward) + 4.0 * _EPS * prices
     statuses = np.zeros(k.shape, dtype=np.uint8)
     vols = np.full(k.shape, np.nan)
     if implied_vols:
-        found = total_deviation(k, otm.value)
+        found = total_deviation(k, value)
         vols = found.deviations / np.sqrt(batch.expiry[batch.slice_of])
         statuses = found.statuses.copy()
-    own = np.where(is_digital, otm.digital, otm.value)
-    own_bound = np.where(is_digital, otm.digital_bound, otm.bound)
-    missed = (own_bound > tolerance * own) & (statuses == Status.OK)
-    statuses[missed] = Status.TOLERANCE_NOT_MET
-    ends = np.append(batch.starts[1:], batch.strikes.shape[0])
-    resolved = resolved.astype(np.uint8)
+    own, own_bound = np.where(sides.digital, p_value, value), np.where(sides.digital, p_bound, bound)
+    statuses[(own_bound > tolerance * own) & (statuses == _OK)] = _TOLERANCE_NOT_MET
+    ends = [*batch.starts[1:].tolist(), batch.strikes.shape[0]]
     return [
-        PricedSlice(prices[a:b], bounds[a:b], vols[a:b], statuses[a:b], resolved[a:b], report)
-        for a, b, report in zip(batch.starts, ends, otm.reports, strict=True)
+        PricedSlice(prices[a:b], bounds[a:b], vols[a:b], statuses[a:b], sides.payoffs[a:b], reports[i])
+        for i, (a, b) in enumerate(zip(batch.starts.tolist(), ends, strict=True))
     ]
+
+
+@dataclass(frozen=True, slots=True)
+class Sides:
+    """Per strike: payoffs with ``OTM`` resolved (uint8), and whether each is a call, a digital, in the money."""
+
+    payoffs: Bytes
+    call: Any
+    digital: Any
+    in_money: Any
+
+
+def sides_of(batch: Batch) -> Sides:
+    """What each payoff is at its strike; the call side begins at the forward itself."""
+    otm_call = batch.strikes >= batch.forward[batch.slice_of]
+    payoffs = np.where(batch.payoffs == _OTM, np.where(otm_call, _CALL, _PUT), batch.payoffs).astype(np.uint8)
+    call = (payoffs == _CALL) | (payoffs == _DIGITAL_CALL)
+    return Sides(payoffs, call, payoffs >= _DIGITAL_CALL, call != otm_call)

@@ -83,6 +83,10 @@ class Black:
         """Total variance ``volatility^2 tau``."""
         return np.asarray(self.volatility * self.volatility * tau)
 
+    def variance_weights(self) -> list[tuple[int, Any]]:
+        """No variance factor."""
+        return []
+
     def bend(self, tau: float) -> tuple[float, float]:
         """No linear phase; bounded within 45 degrees of the real axis."""
         return 0.0, 0.25 * np.pi

@@ -37,7 +37,7 @@ def explosion_edges(*, kappa: Any, sigma: Any, rho: Any, tau: Any, precise: bool
         np.concatenate([np.ravel(a), np.ravel(b)])[:, None]
         for a, b in ((kappa, kappa - rho * sigma), (sigma, sigma), (rho, -rho), (tau, tau))
     ]
-    distance = _distance(*sides, precise)
+    distance = _distance(sides[0], sides[1], sides[2], sides[3], precise)
     half = distance.shape[0] // 2
     return -distance[half:].reshape(shape), 1.0 + distance[:half].reshape(shape)
 

@@ -165,6 +165,10 @@ class Heston:
         late = np.where(kt < 1e-3, kt / 2.0 - kt * kt / 6.0 + kt**3 / 24.0, 1.0 - share)
         return np.asarray(self.v0 * tau * share + self.theta * tau * late)
 
+    def variance_weights(self) -> list[tuple[int, Any]]:
+        """The one factor: ``rho sigma``."""
+        return [(0, self.rho * self.sigma)]
+
     def bend(self, tau: float) -> tuple[float, float]:
         """``k_inf = -rho (v0 + kappa theta tau) / sigma``; ``phi`` is analytic off the imaginary axis (Lucic 2007)."""
         v0, kappa, theta, sigma, rho = (float(np.reshape(getattr(self, f.name), -1)[0]) for f in fields(self))

@@ -180,12 +180,18 @@ def _by_series(
     a_by_b = t**3 * sum(value / (n + 1.0) for n, value in enumerate(hb))
     a_by_c = t**4 * sum(value / (n + 1.0) for n, value in enumerate(hg))
     b_by_b, b_by_c = t**2 * sum(hb), t**3 * sum(hg)
-    out = [np.array(np.broadcast_to(a, shape)) for a in (found.b_value, found.a_by_b, found.a_by_c, found.b_by_b,
-                                                         found.b_by_c, found.size_by_b, found.size_by_c)]  # fmt: skip
-    new = (
-        t * sum(h), a_by_b, a_by_c, b_by_b, b_by_c,
-        64.0 * (kt * np.abs(a_by_b) + v * np.abs(b_by_b)), 64.0 * (kt * np.abs(a_by_c) + v * np.abs(b_by_c)),
-    )  # fmt: skip
-    for target, value in zip(out, new, strict=True):
-        target[near] = value
-    return _Slopes(*out)
+
+    def merged(old: Any, new: Any) -> Any:
+        out = np.array(np.broadcast_to(old, shape))
+        out[near] = new
+        return out
+
+    return _Slopes(
+        merged(found.b_value, t * sum(h)),
+        merged(found.a_by_b, a_by_b),
+        merged(found.a_by_c, a_by_c),
+        merged(found.b_by_b, b_by_b),
+        merged(found.b_by_c, b_by_c),
+        merged(found.size_by_b, 64.0 * (kt * np.abs(a_by_b) + v * np.abs(b_by_b))),
+        merged(found.size_by_c, 64.0 * (kt * np.abs(a_by_c) + v * np.abs(b_by_c))),
+    )
