@@ -7,7 +7,7 @@ from typing import Annotated, Any, Final, Literal
 from pydantic import Field
 
 from service.fields import Answer, Finite, described
-from service.terms.schemas import QuotedExpiry, SliceAsked, SmileTerms, VanillaPayoff, WarningAnswer
+from service.terms.schemas import QuotedExpiry, SliceAsked, SmileTerms, VanillaPayoff, WarningAnswer, WordOrColumn
 
 __all__ = ["EXAMPLE", "ImpliedVolsAnswer", "ImpliedVolsAsked", "PricesSliceAsked"]
 
@@ -33,7 +33,7 @@ class PricesSliceAsked(SliceAsked):
         unit="years, or date YYYY-MM-DD",
         example=1.0,
     )
-    payoff: VanillaPayoff | Annotated[list[VanillaPayoff], Field(min_length=1, fail_fast=True)] = described(
+    payoff: WordOrColumn[VanillaPayoff] = described(
         "What the prices are for: one word for all strikes, or one per strike. otm is the vanilla out of the money "
         "against the forward.",
         unit="none",

@@ -9,7 +9,7 @@ from pydantic import Field
 from engine import TOLERANCE_RANGE
 from service.fields import Answer, described
 from service.terms.models import AnyModel
-from service.terms.schemas import AnyPayoff, PricedExpiry, SliceAsked, SmileTerms, WarningAnswer
+from service.terms.schemas import AnyPayoff, PricedExpiry, SliceAsked, SmileTerms, WarningAnswer, WordOrColumn
 
 __all__ = ["EXAMPLE", "Output", "SmileSliceAsked", "SmilesAnswer", "SmilesAsked"]
 
@@ -29,7 +29,7 @@ class SmileSliceAsked(SliceAsked):
         unit="years, or date YYYY-MM-DD",
         example=1.0,
     )
-    payoff: AnyPayoff | Annotated[list[AnyPayoff], Field(min_length=1, fail_fast=True)] = described(
+    payoff: WordOrColumn[AnyPayoff] = described(
         "What is paid: one word for all strikes, or one per strike. otm is the vanilla out of the money against the "
         "forward: the call where strike >= forward, else the put. Digitals pay one unit of money at expiry.",
         unit="none",

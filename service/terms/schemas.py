@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from datetime import date
-from typing import Annotated, Any, Final, Literal, TypeAlias
+from typing import Annotated, Any, Final, Literal, TypeAlias, TypeVar
 
 from pydantic import Discriminator, Field, Tag
 
@@ -25,11 +25,23 @@ __all__ = [
     "SmileTerms",
     "VanillaPayoff",
     "WarningAnswer",
+    "WordOrColumn",
 ]
 
 DayCount: TypeAlias = Literal["ACT/365F", "ACT/360", "ACT/ACT"]
 AnyPayoff: TypeAlias = Literal["call", "put", "otm", "digital_call", "digital_put"]
 VanillaPayoff: TypeAlias = Literal["call", "put", "otm"]
+_Word = TypeVar("_Word")
+
+
+def _word_or_column(value: Any) -> str:
+    return "column" if isinstance(value, list) else "word"
+
+
+WordOrColumn = Annotated[
+    Annotated[_Word, Tag("word")] | Annotated[list[_Word], Field(min_length=1, fail_fast=True), Tag("column")],
+    Discriminator(_word_or_column),
+]
 LATEST: Final = EXPIRY_RANGE[1]
 FORWARD_RANGE: Final = PRICE_RANGE
 DISCOUNT_RANGE: Final = (1e-12, 1e3)  # as the engine admits it

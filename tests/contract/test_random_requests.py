@@ -1,7 +1,8 @@
 """A thousand random requests made from the OpenAPI document: no 5xx, and no answer that breaks the document.
 
-Three kinds: bodies that fit the schema, bodies that break it, and bodies that fit it and were made coherent across their
-fields (columns of one length, terms of the market given once), which a schema cannot say and which reach the engine.
+Three kinds: bodies that fit the schema, bodies that break it, and bodies that fit it and were made coherent across
+their fields (columns of one length, terms of the market given once), which a schema cannot say and
+which reach the engine.
 """
 
 from __future__ import annotations
