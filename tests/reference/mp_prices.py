@@ -12,8 +12,8 @@ integrand on the real axis, so that the integral loses only a digit or two again
 The contour is the hyperbola ``w = c + i b sinh(y - i omega)`` (Boyarchenko and Levendorskii 2019), and the rule in
 ``y`` is the plain trapezoidal one, whose error falls like ``exp(-2 pi d / h)``. The step is halved until two successive
 sums agree to a little more than half the digits asked for: halving squares the error, so the finer sum then has them
-all with some to spare. If they never agree, ``NotReached`` is raised. A value that Markov's inequality puts below
-``exp(-NEGLIGIBLE)``, far under the double range, comes back as zero.
+all with some to spare. If they never agree, ``NotReached`` is raised. An integral that Markov's inequality puts below
+``exp(-NEGLIGIBLE)``, far under the double range, counts as zero.
 """
 
 from __future__ import annotations
@@ -246,8 +246,8 @@ def _contour_integral(
     if residue is None:
         residue = mpfr(0)
     p = _saddle(at, interval, k, payoff)
-    if residue == 0 and at.log_moment(mpc(p), None)[0].real - (p - payoff.shift) * k < -NEGLIGIBLE:
-        return mpfr(0)
+    if at.log_moment(mpc(p), None)[0].real - (p - payoff.shift) * k < -NEGLIGIBLE:
+        return residue
     angle, half = _angles(at, k)
     angle = math.pi / 2 + lean * (angle - math.pi / 2)
     half *= 0.9 if lean == 1.0 else 0.45
