@@ -15,7 +15,7 @@ from time import perf_counter
 from typing import TypeVar
 
 from engine import RefusedError
-from service.problems import Problem
+from service.problems import Problem, over_limit
 from service.settings import Settings
 
 __all__ = ["Compute", "Done", "Outcome", "Task"]
@@ -80,11 +80,11 @@ class Compute:
                 return _timed(task, self._settings.inline_nodes)
             except RefusedError:
                 pass
-        return await self.away(lambda: _timed(task, self._settings.max_nodes))
+        return await self.away(lambda: self._within_limit(task))
 
     async def prepare_and_run(self, prepare: Callable[[], Task]) -> Done:
         """Make a task of a large body and compute it, all of it in a thread."""
-        return await self.away(lambda: _timed(prepare(), self._settings.max_nodes))
+        return await self.away(lambda: self._within_limit(prepare()))
 
     async def away(self, work: Callable[[], Result]) -> Result:
         """Run ``work`` in a thread; raises Problem ``overloaded`` when the queue is full."""
@@ -100,6 +100,16 @@ class Compute:
             return await asyncio.get_running_loop().run_in_executor(self._pool, work)
         finally:
             self._held -= 1
+
+    def _within_limit(self, task: Task) -> Done:
+        """Compute with all the transform nodes that a request may have."""
+        most = self._settings.max_nodes
+        try:
+            return _timed(task, most)
+        except RefusedError as error:
+            raise over_limit(
+                error.argument, "needs more transform nodes than there may be", most, "MAX_NODES"
+            ) from None
 
     def close(self) -> None:
         """Take no more work; what runs ends, what waits is dropped."""

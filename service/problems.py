@@ -16,7 +16,18 @@ from starlette.responses import Response
 
 from engine import EngineError, RefusedError
 
-__all__ = ["KINDS", "MEDIA_TYPE", "Fault", "Problem", "ProblemKind", "as_problem", "pointer", "problem_answer"]
+__all__ = [
+    "KINDS",
+    "MEDIA_TYPE",
+    "MOST_FAULTS",
+    "Fault",
+    "Problem",
+    "ProblemKind",
+    "as_problem",
+    "over_limit",
+    "pointer",
+    "problem_answer",
+]
 
 MEDIA_TYPE: Final = "application/problem+json"
 MOST_FAULTS: Final = 50  # listed in one answer; the detail says how many there are
@@ -155,12 +166,18 @@ def pointer(*parts: str | int) -> str:
     return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in parts)
 
 
+def over_limit(name: str, what: str, limit: int, setting: str) -> Problem:
+    """The problem of a request that is larger than a setting admits."""
+    detail = f"{what}; the limit is {limit} (setting SMILEWRIGHT_{setting})"
+    return Problem("limit-exceeded", f"{pointer(name)} {detail}.", faults=[Fault(pointer(name), detail)])
+
+
 def as_problem(error: Exception) -> Problem:
     """The table. What is not in it is a defect, and its text stays in the log."""
     if isinstance(error, Problem):
         return error
     if isinstance(error, RefusedError):
-        return _pointed("limit-exceeded", error, f"{error.allowed} (setting SMILEWRIGHT_MAX_NODES)")
+        return _pointed("limit-exceeded", error, error.allowed)
     if isinstance(error, EngineError):
         return _pointed("invalid-request", error, error.allowed)
     if isinstance(error, HTTPException):

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from engine import EXPIRY_RANGE, Payoff, year_fraction
-from service.problems import Fault, Problem, pointer
+from service.problems import Fault, Problem, over_limit, pointer
 from service.settings import Settings
 from service.terms.schemas import DISCOUNT_RANGE, FORWARD_RANGE, LATEST, MarketAsked, SmileTerms
 
@@ -81,16 +81,11 @@ class SliceTerms:
 def check_sizes(slices: Sequence[_HasStrikes], settings: Settings, *, name: str = "slices") -> int:
     """Strikes in all; raises Problem ``limit-exceeded`` when there are too many slices or strikes."""
     if len(slices) > settings.max_slices:
-        raise _over(f"has {len(slices)} entries", settings.max_slices, "MAX_SLICES", name)
+        raise over_limit(name, f"has {len(slices)} entries", settings.max_slices, "MAX_SLICES")
     strikes = sum(len(one.strikes) for one in slices)
     if strikes > settings.max_strikes:
-        raise _over(f"has {strikes} strikes in all", settings.max_strikes, "MAX_STRIKES", name)
+        raise over_limit(name, f"has {strikes} strikes in all", settings.max_strikes, "MAX_STRIKES")
     return strikes
-
-
-def _over(what: str, limit: int, setting: str, name: str) -> Problem:
-    detail = f"{what}; the limit is {limit} (setting SMILEWRIGHT_{setting})"
-    return Problem("limit-exceeded", f"{pointer(name)} {detail}.", faults=[Fault(pointer(name), detail)])
 
 
 def expiry_years(terms: _HasDates, expiry: float | date, faults: Faults, *at: str | int) -> float:
