@@ -11,8 +11,10 @@ import math
 import numpy as np
 import pytest
 
+from engine.greeks import price_greeks
 from engine.models.heston import Heston
-from engine.smile import PricedSlice, Slice, price_smiles
+from engine.slices import Slice
+from engine.smile import PricedSlice, price_smiles
 from engine.status import Payoff, Status
 
 # A. Lewis, "Heston Model Reference Prices", 15 Feb 2019, published online: S = 100, T = 1, r = 0.01, q = 0.02 (prices
@@ -89,6 +91,64 @@ def test_fang_oosterlee_2008(expiry: float, payoff: Payoff) -> None:
     # The printed digits are off by 1.6e-8 (one year) and 3.2e-10 (ten years) against 40-digit arithmetic.
     assert abs(found.prices[0] - printed) <= 1e-7
     assert abs(found.implied_vols[0] - vol) <= 1e-13
+
+
+# Greeks of both sets at K = 100, recomputed in 40-digit arithmetic to the digits given: delta, gamma, rho (dC/dr)
+# with respect to the spot at fixed yield, dC/dT at fixed rates (theta is minus it).
+GREEKS = [
+    (
+        LEWIS,
+        Slice(1.0, LEWIS_FORWARD, LEWIS_DISCOUNT, np.array([100.0]), np.array([0], dtype=np.uint8), spot=100.0),
+        {
+            "delta": "0.599471325750028131",
+            "gamma": "0.00928753738",
+            "rho": "43.876977657974",
+            "theta": "-9.43327631833392",
+        },
+        {
+            "v0": "10.1792654044795",
+            "kappa": "0.689854176691162",
+            "theta": "32.5601334741097",
+            "sigma": "-1.11317149821701",
+            "rho": "0.949832739479237",
+        },
+    ),
+    (
+        FANG,
+        Slice(1.0, 100.0, 1.0, np.array([100.0]), np.array([0], dtype=np.uint8), spot=100.0),
+        {
+            "delta": "0.624916495626253",
+            "gamma": "0.0305533418164",
+            "rho": "56.7064941282491",
+            "theta": "-3.56076182472477",
+        },
+        {
+            "v0": "54.5653308932142",
+            "kappa": "0.86874027056887",
+            "theta": "62.9151829186584",
+            "sigma": "-2.20480856321",
+            "rho": "0.580572611416794",
+        },
+    ),
+]
+
+
+@pytest.mark.parametrize(("model", "one", "greeks", "sensitivities"), GREEKS)
+def test_greeks_and_sensitivities(
+    model: Heston, one: Slice, greeks: dict[str, str], sensitivities: dict[str, str]
+) -> None:
+    found = price_greeks(model, [one], greeks=list(greeks), sensitivities=True, tolerance=1e-12)[0]
+    assert found.with_respect_to == "spot"
+    for table, values, bounds in (
+        (greeks, found.greeks, found.greek_bounds),
+        (sensitivities, found.sensitivities, found.sensitivity_bounds),
+    ):
+        for name, digits in table.items():
+            unit = 10.0 ** -len(digits.split(".")[1])  # of the last digit given
+            rounded_inputs = 4e-16 * 100.0 * (1.0 + abs(float(digits)))
+            error = abs(values[name][0] - float(digits))
+            assert error <= bounds[name][0] + unit + rounded_inputs, name
+            assert bounds[name][0] <= 1e-9 * max(1.0, abs(float(digits))), name
 
 
 # Critical moments w+ and w-: where the explosion time of Andersen and Piterbarg (2007, Finance Stoch. 11) equals the
