@@ -24,7 +24,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from engine.arrays import Bytes, Floats, vector
-from engine.black.inversion import normalised_deviation
+from engine.black.inversion import BLOCK, normalised_deviation
 from engine.errors import InputError
 from engine.moneyness import log_moneyness
 from engine.status import Payoff, Status
@@ -32,6 +32,7 @@ from engine.status import Payoff, Status
 __all__ = ["ImpliedVols", "implied_vols"]
 
 _NOISE = 2.0 * float(np.finfo(np.float64).eps)  # relative to the larger leg
+_CALL, _PUT = np.uint8(Payoff.CALL), np.uint8(Payoff.PUT)
 _SPLIT = 2.0**27 + 1.0  # Veltkamp's constant for 53 bits
 
 
@@ -62,59 +63,80 @@ def implied_vols(
     discount factors that are not above 0."""
     price = vector("prices", prices)
     n = price.shape[0]
-    strike = vector("strikes", strikes, length=n)
-    ahead = vector("forward", forward, length=n)
-    discount = vector("discount_factor", discount_factor, length=n)
+    strike = _above_zero("strikes", strikes, n)
+    ahead = _above_zero("forward", forward, n)
+    discount = _above_zero("discount_factor", discount_factor, n)
     years = vector("expiry", expiry, length=n)
     payoff = _payoffs(payoffs, n)
-    for name, values in (("strikes", strike), ("forward", ahead), ("discount_factor", discount)):
-        wrong = values <= 0.0
-        if wrong.any():
-            at = int(np.argmax(wrong))
-            raise InputError(name, f"is {float(values[at])!r}", index=(at,), allowed="above 0")
+    out = ImpliedVols(np.empty(n), np.empty(n, dtype=np.uint8))
     with np.errstate(all="ignore"):
-        low = np.minimum(strike, ahead) * discount
-        value, noise = _time_values(price, strike, ahead, discount, payoff)
-        value[np.abs(value) <= noise] = 0.0
-        found = normalised_deviation(np.abs(log_moneyness(strike, ahead)), value / low)
-        vols = found.deviations / np.sqrt(years)
-    statuses = found.statuses
-    statuses[years <= 0.0] = Status.EXPIRED
-    finite = [np.isfinite(values) for values in (price, strike, ahead, discount, years)]
-    statuses[~np.logical_and.reduce(finite)] = Status.NOT_FINITE
-    vols[statuses != Status.OK] = np.nan
-    return ImpliedVols(vols, statuses)
+        for begin in range(0, n, BLOCK):
+            part = slice(begin, begin + BLOCK)
+            found = _volatilities(price[part], strike[part], ahead[part], discount[part], years[part], payoff[part])
+            out.vols[part], out.statuses[part] = found.vols, found.statuses
+    return out
+
+
+def _above_zero(name: str, values: ArrayLike, n: int) -> Floats:
+    column = vector(name, values, length=n)
+    wrong = column <= 0.0
+    if wrong.any():
+        at = int(np.argmax(wrong))
+        raise InputError(name, f"is {float(column[at])!r}", index=(at,), allowed="above 0")
+    return column
 
 
 def _payoffs(payoffs: ArrayLike, n: int) -> Bytes:
     codes = np.asarray(payoffs)
+    if codes.dtype.kind not in "iu" and codes.size:
+        raise InputError("payoffs", "is not an array of payoff codes", allowed="codes of call, put or otm")
     if codes.ndim == 0:
         codes = np.full(n, codes)
     if codes.shape != (n,):
         raise InputError("payoffs", f"has shape {codes.shape}", allowed=f"one, or exactly {n}")
-    wrong = ~np.isin(codes, (Payoff.CALL, Payoff.PUT, Payoff.OTM))
+    wrong = (codes < Payoff.CALL) | (codes > Payoff.OTM)
     if wrong.any():
         at = int(np.argmax(wrong))
-        raise InputError("payoffs", f"is {codes[at].item()!r}", index=(at,), allowed="call, put or otm")
-    return codes.astype(np.uint8)
+        raise InputError("payoffs", f"is {int(codes[at])}", index=(at,), allowed="codes of call, put or otm")
+    return codes.astype(np.uint8, copy=False)
 
 
-def _time_values(
-    price: Floats, strike: Floats, forward: Floats, discount: Floats, payoff: Bytes
-) -> tuple[Floats, Floats]:
-    """Discounted out-of-the-money values, and what of them is rounding (0 where nothing was subtracted)."""
-    gap = strike - forward  # two-sum: gap + gap_error is strike - forward exactly
-    back = gap + forward
-    gap_error = (strike - back) - (forward - (back - gap))
-    in_money = np.where(gap >= 0.0, payoff == Payoff.PUT, payoff == Payoff.CALL)
-    if not in_money.any():
-        return price.copy(), np.zeros(price.shape)
-    sign = np.where(gap >= 0.0, 1.0, -1.0)
-    product = discount * gap
-    product_error = _product_error(discount, gap, product) + discount * gap_error
-    value = (price - sign * product) - sign * product_error
-    noise = _NOISE * discount * np.maximum(strike, forward)
-    return np.where(in_money, value, price), np.where(in_money, noise, 0.0)
+def _volatilities(
+    price: Floats, strike: Floats, forward: Floats, discount: Floats, years: Floats, payoff: Bytes
+) -> ImpliedVols:
+    """One block. A NaN or an infinity in price, strike or forward makes ``a`` or ``c`` one; the rest is looked at."""
+    value = _time_values(price, strike, forward, discount, payoff)
+    value /= np.minimum(strike, forward) * discount
+    found = normalised_deviation(np.abs(log_moneyness(strike, forward)), value)
+    vols, statuses = found.deviations, found.statuses
+    vols /= np.sqrt(years)
+    expired = years <= 0.0
+    if expired.any():
+        statuses[expired & (statuses != Status.NOT_FINITE)] = Status.EXPIRED
+        vols[expired] = np.nan
+    infinite = ~(np.isfinite(years) & np.isfinite(discount))
+    if infinite.any():
+        statuses[infinite] = Status.NOT_FINITE
+        vols[infinite] = np.nan
+    return ImpliedVols(vols, statuses)
+
+
+def _time_values(price: Floats, strike: Floats, forward: Floats, discount: Floats, payoff: Bytes) -> Floats:
+    """Discounted out-of-the-money values; exactly 0 where what was left of a price in the money is its rounding."""
+    gap = strike - forward
+    in_money = np.flatnonzero(payoff == np.where(gap < 0.0, _CALL, _PUT))
+    value = price.copy()
+    if in_money.shape[0]:
+        strike, forward, discount, gap = strike[in_money], forward[in_money], discount[in_money], gap[in_money]
+        back = gap + forward  # two-sum: gap + gap_error is strike - forward exactly
+        gap_error = (strike - back) - (forward - (back - gap))
+        product = discount * gap
+        product_error = _product_error(discount, gap, product) + discount * gap_error
+        sign = np.sign(gap)
+        left = (price[in_money] - sign * product) - sign * product_error
+        left[np.abs(left) <= _NOISE * discount * np.maximum(strike, forward)] = 0.0
+        value[in_money] = left
+    return value
 
 
 def _product_error(x: Floats, y: Floats, product: Floats) -> Floats:

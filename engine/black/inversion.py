@@ -34,10 +34,10 @@ from engine.black.guess import from_quantile, from_table
 from engine.black.mills import NEAR_MONEY, difference, difference_near, total
 from engine.status import Status
 
-__all__ = ["MAX_EVALUATIONS", "TotalDeviations", "normalised_deviation", "total_deviation"]
+__all__ = ["BLOCK", "MAX_EVALUATIONS", "TotalDeviations", "normalised_deviation", "total_deviation"]
 
 MAX_EVALUATIONS = 4
-_BLOCK = 4096  # quotes at a time: some twenty temporaries of this length stay in the second-level cache
+BLOCK = 4096  # quotes at a time: some twenty temporaries of this length stay in the second-level cache
 _ROUGH = 5e-5  # a step leaves C |f|^4 of s, where C <= 0.07, and <= 7 just above the inflexion: below 5e-17
 _TABLE_END = 4.0  # a from which the quantile gives the better guess
 _SMALLEST = float(np.finfo(np.float64).tiny)  # below it a double has lost digits: no time value to speak of
@@ -96,8 +96,8 @@ def _deviations(a: Floats, c: Floats) -> TotalDeviations:
 def _solve(a: Floats, c: Floats) -> Floats:
     """All quotes have a solution; block by block."""
     out = np.empty(a.shape)
-    for begin in range(0, a.shape[0], _BLOCK):
-        end = begin + _BLOCK
+    for begin in range(0, a.shape[0], BLOCK):
+        end = begin + BLOCK
         out[begin:end] = _solve_block(a[begin:end], c[begin:end])
     return out
 

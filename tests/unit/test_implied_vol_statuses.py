@@ -174,6 +174,9 @@ def test_wrong_calls_are_refused_by_name():
         ({"discount_factor": [1.0, -0.5]}, "discount_factor", (1,)),
         ({"payoffs": [0, 3]}, "payoffs", (1,)),
         ({"payoffs": [0, 0, 0]}, "payoffs", ()),
+        ({"payoffs": "call"}, "payoffs", ()),
+        ({"payoffs": -1}, "payoffs", (0,)),
+        ({"strikes": ["a", "b"]}, "strikes", ()),
         ({"expiry": [1.0, 1.0, 1.0]}, "expiry", ()),
     ):
         with pytest.raises(InputError) as caught:

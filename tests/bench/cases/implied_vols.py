@@ -10,7 +10,8 @@ import mpmath as mp
 import numpy as np
 from scipy.optimize import brentq
 
-from engine.black import inversion, otm_value, total_deviation
+from engine.black import implied_vols, inversion, otm_value, total_deviation
+from engine.status import Payoff
 from tests.bench.table import Table, count, error, ratio, seconds
 from tests.bench.timing import Stopwatch
 
@@ -32,17 +33,19 @@ def tables(watch: Stopwatch) -> Iterable[Table]:
         (
             "quotes",
             "n",
-            "time",
+            "call",
             "per quote",
-            "brentq per quote",
-            "of the call",
+            "inversion",
+            "brentq",
+            "of per quote",
             "evaluations",
             "most",
             "error",
-            "error, brentq",
+            "brentq's",
         ),
         notes=[
-            f"brentq: a loop of scipy.optimize.brentq on math.erfc, timed on {LOOP:,} of the same quotes",
+            "call: implied_vols from out-of-the-money prices; inversion: per quote, from k and value alone",
+            f"brentq: a loop of scipy.optimize.brentq on math.erfc, per quote, timed on {LOOP:,} of the same quotes",
             "evaluations: of Black's formula, mean and most per quote, counted",
             "error: largest of 300 quotes against 50 digits, in rounding units times the condition number",
         ],
@@ -56,8 +59,23 @@ def tables(watch: Stopwatch) -> Iterable[Table]:
 def _row(watch: Stopwatch, n: int, least: float, most: float, width: float) -> tuple[str, ...]:
     k, s, value = _quotes(n, least, most, width)
     few = np.linspace(0, n - 1, min(n, LOOP)).astype(int)
-    times = watch.together({"call": lambda: total_deviation(k, value), "loop": lambda: _loop(k[few], value[few])})
-    call, loop = times["call"].best / n, times["loop"].best / few.shape[0]
+    columns = {
+        "strikes": 100.0 * np.exp(k),
+        "forward": 100.0,
+        "discount_factor": 0.97,
+        "expiry": 1.0,
+        "payoffs": Payoff.OTM,
+    }
+    price = 97.0 * value
+    times = watch.together(
+        {
+            "call": lambda: implied_vols(price, **columns),
+            "inversion": lambda: total_deviation(k, value),
+            "loop": lambda: _loop(k[few], value[few]),
+        }
+    )
+    call, inverse = times["call"].best / n, times["inversion"].best / n
+    loop = times["loop"].best / few.shape[0]
     found = total_deviation(k, value).deviations
     spent = _evaluations(k[few], value[few])
     some = few[:: max(1, few.shape[0] // 300)]
@@ -66,6 +84,7 @@ def _row(watch: Stopwatch, n: int, least: float, most: float, width: float) -> t
         count(n),
         seconds(times["call"].best),
         seconds(call),
+        seconds(inverse),
         seconds(loop),
         ratio(loop, call),
         f"{spent.mean():.2f}",
