@@ -88,16 +88,16 @@ def _above_zero(name: str, values: ArrayLike, n: int) -> Floats:
 
 def _payoffs(payoffs: ArrayLike, n: int) -> Bytes:
     codes = np.asarray(payoffs)
-    if codes.dtype.kind not in "iu" and codes.size:
+    if codes.dtype.kind not in "iuf":
         raise InputError("payoffs", "is not an array of payoff codes", allowed="codes of call, put or otm")
     if codes.ndim == 0:
         codes = np.full(n, codes)
     if codes.shape != (n,):
         raise InputError("payoffs", f"has shape {codes.shape}", allowed=f"one, or exactly {n}")
-    wrong = (codes < Payoff.CALL) | (codes > Payoff.OTM)
+    wrong = (codes != Payoff.CALL) & (codes != Payoff.PUT) & (codes != Payoff.OTM)
     if wrong.any():
         at = int(np.argmax(wrong))
-        raise InputError("payoffs", f"is {int(codes[at])}", index=(at,), allowed="codes of call, put or otm")
+        raise InputError("payoffs", f"is {codes[at].item()!r}", index=(at,), allowed="codes of call, put or otm")
     return codes.astype(np.uint8, copy=False)
 
 

@@ -176,6 +176,8 @@ def test_wrong_calls_are_refused_by_name():
         ({"payoffs": [0, 0, 0]}, "payoffs", ()),
         ({"payoffs": "call"}, "payoffs", ()),
         ({"payoffs": -1}, "payoffs", (0,)),
+        ({"payoffs": [1.0, 0.5]}, "payoffs", (1,)),
+        ({"payoffs": [math.nan, 0.0]}, "payoffs", (0,)),
         ({"strikes": ["a", "b"]}, "strikes", ()),
         ({"expiry": [1.0, 1.0, 1.0]}, "expiry", ()),
     ):
