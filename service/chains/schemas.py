@@ -28,6 +28,39 @@ EXAMPLE: Final[dict[str, Any]] = {
         }
     ],
 }
+_EXPIRY: Final[dict[str, Any]] = {
+    "expiry": 0.5095890410958904,
+    "strikes": [95.0, 110.0],
+    "status": "fitted",
+    "forward": 100.5,
+    "discount_factor": 0.99,
+    "forward_standard_error": 0.05,
+    "discount_factor_standard_error": 0.012,
+    "rate": 0.01972,
+    "dividend_yield": 0.00994,
+    "pairs": 2,
+    "pairs_used": 2,
+    "rms_residual": 0.01,
+    "payoffs": ["put", "call"],
+    "implied_vols": {"bid": [0.206, 0.18], "mid": [0.21, 0.184], "ask": [0.214, 0.189]},
+    "statuses": {"bid": ["ok", "ok"], "mid": ["ok", "ok"], "ask": ["ok", "ok"]},
+    "flags": {"calls": [[], []], "puts": [[], ["wide"]]},
+    "usable": [True, True],
+    "warnings": [],
+}
+_TOTALS: Final[dict[str, Any]] = {
+    "expiries": 1,
+    "expiries_without_forward": 0,
+    "strikes": 2,
+    "quotes": 4,
+    "two_sided": 4,
+    "flagged": 1,
+    "by_flag": {"crossed": 0, "wide": 1},
+    "usable": 2,
+    "pairs": 2,
+    "pairs_used": 2,
+    "impossible_quotes": 0,
+}
 Quotes: TypeAlias = Annotated[list[Finite | None], Field(min_length=1, fail_fast=True)]
 VolStatus: TypeAlias = Literal[
     "ok", "below_intrinsic", "above_maximum", "zero_time_value", "not_finite", "expired", "no_quote"
@@ -225,5 +258,5 @@ class TotalsAnswer(Answer):
 class ChainAnswer(Answer):
     """Expiries in the order sent, and counts over all of them."""
 
-    expiries: list[ExpiryAnswer] = described("One entry per expiry sent.", unit="none", example=[])
-    totals: TotalsAnswer = described("Counts over the chain.", unit="count", example={"expiries": 1, "flagged": 2})
+    expiries: list[ExpiryAnswer] = described("One entry per expiry sent.", unit="none", example=[_EXPIRY])
+    totals: TotalsAnswer = described("What there is in the whole chain.", unit="count", example=_TOTALS)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from engine import MODELS, Model, ParameterSpec, Payoff
-from service.terms.models import EXAMPLES
+from service.terms.models import example_of
 
 __all__ = ["models_answer"]
 
@@ -22,13 +22,13 @@ def _model(kind: type[Model]) -> dict[str, Any]:
         "name": kind.name,
         "title": kind.title,
         "source": kind.source,
-        "parameters": [_parameter(spec) for spec in kind.parameters],
+        "parameters": [_parameter(kind.name, spec) for spec in kind.parameters],
         "outputs": _OUTPUTS,
         "payoffs": [payoff.word for payoff in Payoff],
     }
 
 
-def _parameter(spec: ParameterSpec) -> dict[str, Any]:
+def _parameter(model: str, spec: ParameterSpec) -> dict[str, Any]:
     return {
         "name": spec.name,
         "description": spec.description,
@@ -38,5 +38,5 @@ def _parameter(spec: ParameterSpec) -> dict[str, Any]:
         "lower_open": spec.lower_open,
         "upper_open": spec.upper_open,
         "allowed": spec.allowed,
-        "example": EXAMPLES.get(spec.name, spec.upper),
+        "example": example_of(model, spec.name),
     }

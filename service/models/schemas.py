@@ -10,7 +10,11 @@ __all__ = ["ModelAnswer", "ModelsAnswer", "ParameterAnswer"]
 class ParameterAnswer(Answer):
     """One parameter of a model."""
 
-    name: str = described("Its name in requests.", unit="none", example="rho")
+    name: str = described(
+        "Its name in requests; factors.0.rho is the rho of the first object in the array factors.",
+        unit="none",
+        example="rho",
+    )
     description: str = described("What it is.", unit="none", example="Correlation of the underlying with its variance.")
     unit: str = described("Its unit.", unit="none", example="dimensionless")
     lower: float = described("Lower end of the admissible range.", unit="that of the parameter", example=-1.0)

@@ -1,10 +1,12 @@
 """The ``model`` of a request: one schema per model of the engine, told apart by ``name``.
 
-Made from the engine's own parameter lists, so that a model entered there appears here with its ranges and units.
+Made from the engine's own parameter lists, so that a model entered there appears here with its ranges and units. A
+parameter named ``factors.0.rho`` is the ``rho`` of the first of the objects in the array ``factors``.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import reduce
 from operator import or_
 from typing import TYPE_CHECKING, Annotated, Any, Final, Literal, TypeAlias
@@ -14,11 +16,11 @@ from pydantic import Field, create_model
 from engine import MODELS, Model, ParameterSpec
 from service.fields import Asked, described
 
-__all__ = ["EXAMPLES", "AnyModel", "ModelAsked", "engine_model"]
+__all__ = ["AnyModel", "ModelAsked", "engine_model", "example_of"]
 
-# One example per parameter name: the published set of A. Lewis, "Heston Model Reference Prices" (2019), where it has
-# the parameter; plain values else.
-EXAMPLES: Final[dict[str, float]] = {
+# One example per parameter. Heston's are the published set of A. Lewis, "Heston Model Reference Prices" (2019),
+# Variance Gamma's that of Fang and Oosterlee (2008), from memory; the rest are ordinary values.
+_EXAMPLES: Final[dict[str, float]] = {
     "volatility": 0.2,
     "v0": 0.04,
     "kappa": 4.0,
@@ -28,7 +30,12 @@ EXAMPLES: Final[dict[str, float]] = {
     "jump_intensity": 0.5,
     "jump_mean": -0.1,
     "jump_stdev": 0.15,
-    "nu": 0.2,
+    "variance_gamma.sigma": 0.12,
+    "variance_gamma.theta": -0.14,
+    "variance_gamma.nu": 0.2,
+    "factors.1.kappa": 1.0,
+    "factors.1.theta": 0.04,
+    "factors.1.sigma": 0.3,
 }
 
 
@@ -38,20 +45,57 @@ class ModelAsked(Asked):
     name: str
 
 
-def _parameter(spec: ParameterSpec) -> Any:
+def example_of(model: str, parameter: str) -> float:
+    """An ordinary value of a parameter: that of the model, of the place in it, or of the name alone."""
+    plain = parameter.rpartition(".")[2]
+    for name in (f"{model}.{parameter}", parameter, plain):
+        if name in _EXAMPLES:
+            return _EXAMPLES[name]
+    raise KeyError(f"{model} has a parameter {parameter} without an example")
+
+
+def _field(model: str, spec: ParameterSpec) -> Any:
     """The field of one parameter."""
     limits = {"gt" if spec.lower_open else "ge": spec.lower, "lt" if spec.upper_open else "le": spec.upper}
-    return described(spec.description, unit=spec.unit, example=EXAMPLES.get(spec.name, spec.upper), **limits)
+    return described(spec.description, unit=spec.unit, example=example_of(model, spec.name), **limits)
+
+
+def _fields(model: str, specs: Sequence[ParameterSpec]) -> dict[str, Any]:
+    """Fields of an object, those of an inner array of objects under the array's name."""
+    fields: dict[str, Any] = {spec.name: (float, _field(model, spec)) for spec in specs if "." not in spec.name}
+    arrays: dict[str, dict[int, list[ParameterSpec]]] = {}
+    for spec in specs:
+        if "." in spec.name:
+            array, place, _ = spec.name.split(".")
+            arrays.setdefault(array, {}).setdefault(int(place), []).append(spec)
+    for array, places in arrays.items():
+        inner: dict[str, Any] = {spec.name.rpartition(".")[2]: (float, _field(model, spec)) for spec in places[0]}
+        title = _title(f"{model}_{array.removesuffix('s')}")
+        one: Any = create_model(title, __base__=Asked, __doc__=f"One of the {array} of a model.", **inner)
+        count = len(places)
+        example = [
+            {spec.name.rpartition(".")[2]: example_of(model, spec.name) for spec in some} for some in places.values()
+        ]
+        text = f"Its {array}, exactly {count}."
+        fields[array] = (
+            Annotated[list[one], Field(min_length=count, max_length=count)],
+            described(text, unit="none", example=example),
+        )
+    return fields
+
+
+def _title(name: str) -> str:
+    return "".join(word.capitalize() for word in name.split("_"))
 
 
 def _schema(kind: type[Model]) -> type[ModelAsked]:
     """The schema of one model of the engine."""
-    fields: dict[str, Any] = {
+    fields = {
         "name": (Literal[kind.name], described("Which model.", unit="none", example=kind.name)),
-        **{spec.name: (float, _parameter(spec)) for spec in kind.parameters},
+        **_fields(kind.name, kind.parameters),
     }
-    title = "".join(word.capitalize() for word in kind.name.split("_"))
-    return create_model(f"{title}Model", __base__=ModelAsked, __doc__=f"{kind.title}. Source: {kind.source}.", **fields)
+    text = f"{kind.title}. Source: {kind.source}."
+    return create_model(f"{_title(kind.name)}Model", __base__=ModelAsked, __doc__=text, **fields)
 
 
 _SCHEMAS: Final = {name: _schema(kind) for name, kind in MODELS.items()}
@@ -63,7 +107,11 @@ else:
 
 
 def engine_model(asked: ModelAsked) -> Model:
-    """The engine's model with the parameters of a request."""
+    """The engine's model with the parameters of a request; ``factors`` are Heston's parameter sets."""
     kind: Any = MODELS[asked.name]
-    model: Model = kind(**{spec.name: getattr(asked, spec.name) for spec in kind.parameters})
+    values = {name: getattr(asked, name) for name in type(asked).model_fields if name != "name"}
+    if "factors" in values:
+        heston: Any = MODELS["heston"]
+        values["factors"] = tuple(heston(**factor.model_dump()) for factor in values["factors"])
+    model: Model = kind(**values)
     return model

@@ -1,0 +1,122 @@
+"""The OpenAPI document: valid, complete, in step with the files in ``openapi/``; every example runs."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+import httpx
+import pytest
+from jsonschema import Draft202012Validator
+
+from service.openapi_export import contract_files, main
+from tests.contract.contract import Contract
+
+FOLDER = Path(__file__).parents[2] / "openapi"
+EXAMPLES = sorted((FOLDER / "examples").glob("*.json"))
+
+
+def test_the_files_are_what_the_service_says(capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["--check"]) == 0, capsys.readouterr().err
+
+
+def test_drift_is_seen(monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]) -> None:
+    changed = {**contract_files(), "openapi.json": "{}\n", "examples/one_more.json": "{}\n"}
+    monkeypatch.setattr("service.openapi_export.contract_files", lambda: changed)
+    assert main(["--check"]) == 1
+    said = capsys.readouterr().err
+    assert "openapi.json" in said and "examples/one_more.json" in said
+
+
+def test_the_document_served_is_the_document_written(client: httpx.Client) -> None:
+    assert client.get("/openapi.json").json() == json.loads((FOLDER / "openapi.json").read_text(encoding="utf-8"))
+
+
+def _operations(document: dict[str, Any]) -> Iterator[tuple[str, str, dict[str, Any]]]:
+    for path, methods in document["paths"].items():
+        for method, operation in methods.items():
+            yield method, path, operation
+
+
+def test_every_operation_is_described_and_has_an_example(contract: Contract) -> None:
+    assert contract.document["openapi"] == "3.1.0"
+    operations = list(_operations(contract.document))
+    assert {f"{method} {path}" for method, path, _ in operations} >= {
+        "post /v1/smiles",
+        "post /v1/implied-vols",
+        "post /v1/chains",
+        "get /v1/models",
+        "get /healthz",
+        "get /readyz",
+        "get /metrics",
+    }
+    tags = {tag["name"] for tag in contract.document["tags"]}
+    for _, _, operation in operations:
+        assert operation["summary"] and operation["description"] and set(operation["tags"]) <= tags
+    assert {path.stem for path in EXAMPLES} == {operation["operationId"] for _, _, operation in operations}
+
+
+def test_every_field_says_what_it_is(contract: Contract) -> None:
+    """A description, a unit and an example that fits the field's own schema, for every field of every object."""
+    components = {"components": contract.document["components"]}
+    fields = 0
+    for name, schema in contract.document["components"]["schemas"].items():
+        assert schema.get("description"), name
+        assert schema["additionalProperties"] is False, name
+        for field, said in schema["properties"].items():
+            fields += 1
+            place = f"{name}.{field}"
+            assert said.get("description"), place
+            assert said.get("x-unit"), place
+            assert said.get("examples"), place
+            for example in said["examples"]:
+                Draft202012Validator({**components, **said}).validate(example)
+    assert fields > 80
+
+
+def test_every_schema_is_a_schema_and_every_reference_leads_somewhere(contract: Contract) -> None:
+    for schema in contract.document["components"]["schemas"].values():
+        Draft202012Validator.check_schema(schema)
+
+    def references(part: Any) -> Iterator[str]:
+        if isinstance(part, dict):
+            if "$ref" in part:
+                yield part["$ref"]
+            for value in part.values():
+                yield from references(value)
+        elif isinstance(part, list):
+            for value in part:
+                yield from references(value)
+
+    known = {f"#/components/schemas/{name}" for name in contract.document["components"]["schemas"]}
+    used = set(references(contract.document))
+    assert used <= known
+    nested = {ref for ref in known if ref not in used}
+    assert nested == set()
+
+
+@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
+def test_every_example_runs(contract: Contract, path: Path) -> None:
+    """Sent as the file says, answered 200, and the answer fits the document."""
+    example = json.loads(path.read_text(encoding="utf-8"))
+    content = json.dumps(example["body"]).encode() if "body" in example else None
+    answer = contract.client.request(example["method"], example["path"], headers=example["headers"], content=content)
+    if example["path"] == "/readyz":  # a server may still be warming up
+        for _ in range(1000):
+            if answer.status_code == 200:
+                break
+            answer = contract.client.get("/readyz")
+    assert answer.status_code == 200, answer.text
+    contract.hold(answer, example["method"].lower(), example["path"])
+
+
+def test_refusals_are_documented_with_their_pages(contract: Contract) -> None:
+    for _, _, operation in _operations(contract.document):
+        for status, answer in operation["responses"].items():
+            if int(status) >= 400:
+                assert list(answer["content"]) == ["application/problem+json"]
+                assert "/problems/" in answer["description"]
+            if status == "503":
+                assert "Retry-After" in answer["headers"]
