@@ -1,0 +1,110 @@
+"""Computing the pieces of jobs and deciding their outcome: the same in a worker and in a serving process."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Mapping
+from threading import Lock
+from typing import Any, Final
+
+import orjson
+
+from service.jobs.blobs import Blobs
+from service.jobs.kinds import JobKind, JobStopped, Work
+from service.jobs.store import LOST, end_job
+
+__all__ = ["Runner"]
+
+_TRIES: Final = 3  # of one piece, before it is taken to be what ends the processes
+_LOOK_SECONDS: Final = 0.1  # between two looks at whether the job is over
+_KEPT: Final = 4  # requests kept read
+_FAULT: Final[dict[str, Any]] = {
+    "type": "/problems/internal-error",
+    "title": "The service failed",
+    "status": 500,
+    "detail": "An unexpected fault while the job was computed; the log of the worker has it under the job's id.",
+}
+
+
+class Runner:
+    """Computes pieces, one at a time in this process. ``pause`` is called before each piece and may never return."""
+
+    def __init__(self, blobs: Blobs, kinds: Mapping[str, JobKind], *, pause: Callable[[], None] = lambda: None) -> None:
+        self._blobs = blobs
+        self._kinds = kinds
+        self._pause = pause
+        self._one_at_a_time = Lock()
+        self._read: dict[str, Work] = {}
+
+    def over(self, job: str) -> bool:
+        """Whether the job has an outcome."""
+        return self._blobs.has(job, "outcome.json")
+
+    def chunks(self, kind: str, job: str, digest: str) -> list[tuple[int, int]]:
+        """First and last piece, the last excluded, of every step."""
+        count, step = self._work(kind, job, digest).count, self._kinds[kind].chunk
+        return [(first, min(first + step, count)) for first in range(0, count, step)]
+
+    def compute(self, kind: str, job: str, digest: str, first: int, last: int) -> None:
+        """Compute the pieces of one step that are not there yet; raises JobStopped when the job is over."""
+        work = self._work(kind, job, digest)
+        for index in range(first, last):
+            self._pause()
+            with self._one_at_a_time:
+                self._piece(work, job, index)
+
+    def finish(self, kind: str, job: str, digest: str) -> None:
+        """Put the pieces together and call the job succeeded."""
+        work = self._work(kind, job, digest)
+        pieces = [self._blobs.piece(job, index) for index in range(work.count)]
+        if self.over(job):
+            return
+        if any(piece is None for piece in pieces):
+            self.fail(job, LOST)
+            return
+        self._blobs.put(job, "result.json", work.join([piece for piece in pieces if piece is not None]))
+        end_job(self._blobs, job, "succeeded")
+        self._blobs.drop_pieces(job)
+
+    def fail(self, job: str, problem: dict[str, Any] = _FAULT) -> None:
+        """Call the job failed."""
+        end_job(self._blobs, job, "failed", problem)
+
+    def wait_for_piece(self, seconds: float) -> None:
+        """Wait until no piece is being computed, for so long at most."""
+        self._one_at_a_time.acquire(timeout=seconds)
+
+    def _piece(self, work: Work, job: str, index: int) -> None:
+        if self.over(job):
+            raise JobStopped
+        if self._blobs.has(job, f"pieces/{index}"):
+            return
+        self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}))
+        looked = time.monotonic()
+
+        def check() -> None:
+            nonlocal looked
+            now = time.monotonic()
+            if now - looked > _LOOK_SECONDS:
+                looked = now
+                if self.over(job):
+                    raise JobStopped
+
+        if self._blobs.count_try(job, index) > _TRIES:
+            made = work.failed(index, f"the processes that computed it ended unexpectedly, {_TRIES} times")
+        else:
+            made = work.compute(index, check)
+        self._blobs.put_piece(job, index, made)
+
+    def _work(self, kind: str, job: str, digest: str) -> Work:
+        work = self._read.get(job)
+        if work is None:
+            body = self._blobs.get(job, f"request-{digest}.json")
+            if body is None:
+                self.fail(job, LOST)
+                raise JobStopped
+            work = self._kinds[kind].open(body)
+            while len(self._read) >= _KEPT:
+                self._read.pop(next(iter(self._read)))
+            self._read[job] = work
+        return work
