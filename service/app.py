@@ -51,6 +51,7 @@ def create_app(settings: Settings) -> FastAPI:
         redoc_url=None,
         openapi_url=None,
         redirect_slashes=False,
+        telemetry={"tracing": False, "metrics": False, "logs": False},  # ours tells it, and each costs a look-up
     )
     # 1. Outermost: ids, times, metrics, log, and what no handler expected.
     app.add_middleware(Telemetry, metrics=metrics, access_log=settings.access_log)

@@ -88,16 +88,26 @@ class Metrics:
         most = Gauge("smilewright_compute_capacity", "Most requests that may be held.", registry=self.registry)
         most.set_function(lambda: float(compute.capacity))
 
+        self._found: dict[tuple[str, str, int], Counter] = {}
+        self._by_route: dict[str, tuple[Histogram, Histogram, Counter, Counter]] = {}
+
     def observe(self, record: Record, *, method: str, route: str, status: int, seconds: float) -> None:
-        """Count one request."""
-        self.requests.labels(method, route, status).inc()
-        self.seconds.labels(route).observe(seconds)
+        """Count one request. Children are kept: finding them by label costs more than counting."""
+        key = (method, route, status)
+        if key not in self._found:
+            self._found[key] = self.requests.labels(method, route, status)
+        if route not in self._by_route:
+            families = (self.seconds, self.engine, self.strikes, self.nodes)
+            self._by_route[route] = tuple(one.labels(route) for one in families)  # type: ignore[assignment]
+        self._found[key].inc()
+        total, engine, strikes, nodes = self._by_route[route]
+        total.observe(seconds)
         if record.problem:
             self.problems.labels(route, record.problem).inc()
         if record.engine_seconds is not None:
-            self.engine.labels(route).observe(record.engine_seconds)
-            self.strikes.labels(route).inc(record.strikes)
-            self.nodes.labels(route).inc(record.nodes)
+            engine.observe(record.engine_seconds)
+            strikes.inc(record.strikes)
+            nodes.inc(record.nodes)
 
     def text(self) -> bytes:
         """The exposition in Prometheus' text format."""

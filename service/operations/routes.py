@@ -22,6 +22,11 @@ __all__ = ["add_operations_routes"]
 
 def add_operations_routes(router: APIRouter, *, metrics: Metrics, readiness: Readiness) -> None:
     """Probes and metrics."""
+    _add_probes(router, readiness)
+    _add_metrics(router, metrics)
+
+
+def _add_probes(router: APIRouter, readiness: Readiness) -> None:
     alive = encode({"status": "alive", "version": version()})
 
     async def healthz(_request: Request) -> Response:
@@ -38,9 +43,6 @@ def add_operations_routes(router: APIRouter, *, metrics: Metrics, readiness: Rea
                 extra={"checks": checks},
             )
         return Response(encode({"status": "ready", "checks": checks}), media_type="application/json")
-
-    async def scrape(_request: Request) -> Response:
-        return Response(metrics.text(), headers={"Content-Type": CONTENT_TYPE_LATEST})
 
     router.add_api_route(
         "/healthz",
@@ -66,6 +68,12 @@ def add_operations_routes(router: APIRouter, *, metrics: Metrics, readiness: Rea
         responses={200: {"model": ReadyAnswer}, **refusals("not-ready")},
         route_class_override=DirectRoute,
     )
+
+
+def _add_metrics(router: APIRouter, metrics: Metrics) -> None:
+    async def scrape(_request: Request) -> Response:
+        return Response(metrics.text(), headers={"Content-Type": CONTENT_TYPE_LATEST})
+
     router.add_api_route(
         "/metrics",
         scrape,

@@ -48,13 +48,15 @@ def warnings_of(
 
 
 def _of_model(out: list[dict[str, str]], model: ModelAsked) -> None:
-    volatility = getattr(model, "volatility", 0.0)
+    volatility = vars(model).get("volatility", 0.0)
     if volatility > _VOLATILITY:
         _add(out, "/model/volatility", f"is {volatility:.0%}: volatilities are decimals, 0.2 is 20 %")
-    factors = {f"/model/factors/{i}": factor for i, factor in enumerate(getattr(model, "factors", ()))}
-    for at, one in {"/model": model, **factors}.items():
-        for name in ("v0", "theta") if hasattr(one, "v0") else ():
-            variance = getattr(one, name)
+    places = {"/model": vars(model)}
+    for i, factor in enumerate(vars(model).get("factors", ())):
+        places[f"/model/factors/{i}"] = vars(factor)
+    for at, values in places.items():
+        for name in ("v0", "theta") if "v0" in values else ():
+            variance = values[name]
             if variance > _VARIANCE:
                 detail = f"is a variance, a volatility of {variance**0.5:.0%}: 0.04 is a volatility of 20 %"
                 _add(out, f"{at}/{name}", detail)
