@@ -25,7 +25,7 @@ from service.settings import Settings
 from service.telemetry import record_of
 from service.validation import parse
 
-__all__ = ["ArrayOperation", "DirectRoute", "add_array_route", "wants_json"]
+__all__ = ["ArrayOperation", "DirectRoute", "add_array_route", "json_body", "wants_json"]
 
 Request_ = TypeVar("Request_", bound=Asked)
 _SMALL_BODY: Final = 32 * 1024  # bytes; larger bodies are validated in a computing thread
@@ -75,10 +75,8 @@ def add_array_route(
         return operation.plan(parse(operation.request, raw), settings)
 
     async def endpoint(request: Request) -> Response:
-        headers = request.headers
-        wants_json(headers)
-        _is_json(headers)
-        raw = await _body(request, settings.max_body_bytes)
+        wants_json(request.headers)
+        raw = await json_body(request, settings.max_body_bytes)
         if len(raw) <= _SMALL_BODY:
             done = await compute.run(prepare(raw))
         else:
@@ -115,6 +113,12 @@ def wants_json(headers: Headers) -> None:
         if kind in _ACCEPTED and not refused:
             return
     raise Problem("not-acceptable", "This resource answers application/json, which the Accept header excludes.")
+
+
+async def json_body(request: Request, limit: int) -> bytes:
+    """The body, which must be said to be JSON and have at most ``limit`` bytes; raises Problem."""
+    _is_json(request.headers)
+    return await _body(request, limit)
 
 
 def _is_json(headers: Headers) -> None:

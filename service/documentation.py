@@ -11,6 +11,7 @@ __all__ = ["TAGS", "CheckAnswer", "FaultAnswer", "ProblemAnswer", "refusals"]
 
 TAGS: Final = {
     "Pricing": "Model and market in, prices with error bounds out.",
+    "Jobs": "Long work, kept until it is done: submit, follow, look up, cancel.",
     "Market": "Quotes in, forwards, volatilities and flags out.",
     "Reference": "What this service has.",
     "Operations": "For whoever runs the service.",

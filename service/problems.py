@@ -123,6 +123,65 @@ KINDS: Final[dict[str, ProblemKind]] = {
             "Ask again after the number of seconds in Retry-After, or another replica.",
         ),
         ProblemKind(
+            "no-such-job",
+            404,
+            "There is no such job",
+            "No job of yours has this id. Jobs of other callers are not told apart from jobs that do not exist; a job "
+            "is forgotten when its time (expires_at) is over.",
+            "List your jobs to see their ids.",
+        ),
+        ProblemKind(
+            "no-such-surface",
+            404,
+            "The job has no such surface",
+            "The query asks for the report of a surface that the job does not have.",
+            "The id of a surface is the one it was sent with.",
+        ),
+        ProblemKind(
+            "not-finished",
+            409,
+            "The job has no result",
+            "What was asked for is made from the result of the job, and the job has none: it is not over yet, was "
+            "cancelled, or failed.",
+            "Follow the job until it has succeeded. Retry-After says when to look again where it is not over.",
+        ),
+        ProblemKind(
+            "invalid-header",
+            422,
+            "A header was understood and is impossible",
+            "A header of the request has a value that cannot be used. The detail names it and says what is admitted.",
+            "Correct the header, or leave it out.",
+        ),
+        ProblemKind(
+            "invalid-query",
+            422,
+            "The query was understood and is impossible",
+            "A parameter of the query is unknown or has a value that is not admitted. The detail names it.",
+            "Correct the parameter, or leave it out.",
+        ),
+        ProblemKind(
+            "idempotency-key-reused",
+            422,
+            "The Idempotency-Key belongs to another body",
+            "The same key came before with a body that was not the same, byte for byte. Nothing was accepted.",
+            "Take a new key for a new body; send the first body to get the first job again.",
+        ),
+        ProblemKind(
+            "jobs-unavailable",
+            503,
+            "The store of jobs does not answer",
+            "Jobs cannot be accepted or looked up now, because the place where they are kept does not answer, or no "
+            "worker has set it up yet. Accepted jobs are not lost, and everything that is not a job is served as usual.",
+            "Send the request again after the number of seconds in Retry-After; with an Idempotency-Key it is safe.",
+        ),
+        ProblemKind(
+            "job-lost",
+            500,
+            "The job was lost",
+            "The job was given up: its files are gone, or it failed each time it was begun.",
+            "Submit it again, and tell whoever runs the service.",
+        ),
+        ProblemKind(
             "internal-error",
             500,
             "The service failed",

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Callable, Mapping
 from threading import Lock
@@ -45,13 +46,14 @@ class Runner:
         count, step = self._work(kind, job, digest).count, self._kinds[kind].chunk
         return [(first, min(first + step, count)) for first in range(0, count, step)]
 
-    def compute(self, kind: str, job: str, digest: str, first: int, last: int) -> None:
-        """Compute the pieces of one step that are not there yet; raises JobStopped when the job is over."""
+    def compute(self, kind: str, job: str, digest: str, first: int, last: int, *, before: float = math.inf) -> None:
+        """Compute the pieces of one step that are not there yet; raises JobStopped when the job is over, or at the
+        moment ``before`` of ``time.perf_counter``."""
         work = self._work(kind, job, digest)
         for index in range(first, last):
             self._pause()
             with self._one_at_a_time:
-                self._piece(work, job, index)
+                self._piece(work, job, index, before)
 
     def finish(self, kind: str, job: str, digest: str) -> None:
         """Put the pieces together and call the job succeeded."""
@@ -74,17 +76,19 @@ class Runner:
         """Wait until no piece is being computed, for so long at most."""
         self._one_at_a_time.acquire(timeout=seconds)
 
-    def _piece(self, work: Work, job: str, index: int) -> None:
+    def _piece(self, work: Work, job: str, index: int, before: float) -> None:
         if self.over(job):
             raise JobStopped
         if self._blobs.has(job, f"pieces/{index}"):
             return
         self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}))
-        looked = time.monotonic()
+        looked = time.perf_counter()
 
         def check() -> None:
             nonlocal looked
-            now = time.monotonic()
+            now = time.perf_counter()
+            if now > before:
+                raise JobStopped
             if now - looked > _LOOK_SECONDS:
                 looked = now
                 if self.over(job):
