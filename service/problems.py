@@ -171,7 +171,7 @@ KINDS: Final[dict[str, ProblemKind]] = {
             503,
             "The store of jobs does not answer",
             "Jobs cannot be accepted or looked up now, because the place where they are kept does not answer, or no "
-            "worker has set it up yet. Accepted jobs are not lost, and everything that is not a job is served as usual.",
+            "worker has set it up yet. Accepted jobs are not lost, and whatever is no job is served as usual.",
             "Send the request again after the number of seconds in Retry-After; with an Idempotency-Key it is safe.",
         ),
         ProblemKind(
