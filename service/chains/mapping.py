@@ -9,49 +9,30 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-from engine import ChainExpiry, Payoff, Status, Surface, SurfaceExpiry, build_surface, flag_words
-from service.chains.schemas import ChainAsked, ChainExpiryAsked
+from engine import Payoff, Status, Surface, SurfaceExpiry, build_surface, flag_words
 from service.compute import Outcome, Task
 from service.encoding import encode
 from service.settings import Settings
-from service.terms.mapping import Faults, check_sizes, expiry_years
+from service.terms.chain import ChainAsked, check_chain, engine_chain
+from service.terms.mapping import Faults, check_sizes
 
 __all__ = ["plan"]
 
 _STATUS_WORDS: Final = {int(status): status.word for status in Status}
 _PAYOFF_WORDS: Final = {int(payoff): payoff.word for payoff in Payoff}
-_COLUMNS: Final = ("call_bids", "call_asks", "put_bids", "put_asks")
 
 
 def plan(asked: ChainAsked, settings: Settings) -> Task:
     """The task of one request; raises Problem for sizes over a limit and columns of other lengths."""
     strikes = check_sizes(asked.expiries, settings, name="expiries")
     faults = Faults()
-    years = []
-    for i, one in enumerate(asked.expiries):
-        years.append(expiry_years(asked, one.expiry, faults, "expiries", i, "expiry"))
-        for name in _COLUMNS:
-            if len(getattr(one, name)) != len(one.strikes):
-                detail = f"has {len(getattr(one, name))} entries for {len(one.strikes)} strikes; give one per strike"
-                faults.add(detail, "expiries", i, name)
+    years = check_chain(asked, faults)
     faults.refuse()
 
     def work(_node_limit: int) -> Outcome:
-        chain = [_engine_expiry(one, tau) for one, tau in zip(asked.expiries, years, strict=True)]
-        return Outcome(encode(_answer(build_surface(chain), asked.spot)))
+        return Outcome(encode(_answer(build_surface(engine_chain(asked, years)), asked.spot)))
 
     return Task(work, 4 * strikes)
-
-
-def _engine_expiry(asked: ChainExpiryAsked, years: float) -> ChainExpiry:
-    columns = {name: np.array(getattr(asked, name), dtype=np.float64) for name in _COLUMNS}  # None becomes NaN
-    return ChainExpiry(
-        expiry=years,
-        strikes=np.array(asked.strikes, dtype=np.float64),
-        forward=asked.forward,
-        discount_factor=asked.discount_factor,
-        **columns,
-    )
 
 
 def _answer(surface: Surface, spot: float | None) -> dict[str, Any]:

@@ -6,7 +6,8 @@ from typing import Final
 
 from service.array_route import ArrayOperation
 from service.chains.mapping import plan
-from service.chains.schemas import EXAMPLE, ChainAnswer, ChainAsked
+from service.chains.schemas import ChainAnswer
+from service.terms.chain import EXAMPLE, ChainAsked
 
 __all__ = ["OPERATION"]
 

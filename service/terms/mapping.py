@@ -26,13 +26,18 @@ _CODES: Final = {payoff.word: int(payoff) for payoff in Payoff}
 
 @dataclass(slots=True)
 class Faults:
-    """Faults found so far."""
+    """Faults found so far. ``place``: where in the body the paths begin."""
 
     found: list[Fault] = field(default_factory=list)
+    place: tuple[str | int, ...] = ()
 
     def add(self, detail: str, *at: str | int) -> None:
         """Note what is wrong with the value at a path."""
-        self.found.append(Fault(pointer(*at), detail))
+        self.found.append(Fault(pointer(*self.place, *at), detail))
+
+    def under(self, *at: str | int) -> Faults:
+        """The same faults, for an object that stands at a path."""
+        return Faults(self.found, (*self.place, *at))
 
     def refuse(self) -> None:
         """Raise Problem if there are any."""
@@ -93,7 +98,7 @@ def expiry_years(terms: _HasDates, expiry: float | date, faults: Faults, *at: st
     if not isinstance(expiry, date):
         return expiry
     if terms.valuation_date is None:
-        faults.add(f"is required: {pointer(*at)} is a date", "valuation_date")
+        faults.add(f"is required: {pointer(*faults.place, *at)} is a date", "valuation_date")
         return math.nan
     years = year_fraction(terms.valuation_date, expiry, day_count=terms.day_count)
     if abs(years) > LATEST:
