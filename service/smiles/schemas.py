@@ -44,11 +44,11 @@ class SmilesAsked(SmileTerms):
     slices: Annotated[list[SmileSliceAsked], Field(min_length=1)] = described(
         "The expiries to price, in any order.", unit="none", example=EXAMPLE["slices"]
     )
-    outputs: Annotated[tuple[Output, ...], Field(min_length=1, max_length=16)] = described(
+    outputs: Annotated[list[Output], Field(min_length=1, max_length=16)] = described(
         "What to answer; what is not named is absent.",
         unit="none",
         example=["price", "implied_vol", "error_bound"],
-        default=("price", "implied_vol", "error_bound"),  # a tuple: lists are copied for every request
+        default=("price", "implied_vol", "error_bound"),  # a tuple: a list is copied for every request
     )
     tolerance: float = described(
         "Error asked for, relative to the out-of-the-money value.",
