@@ -7,8 +7,12 @@ from engine.errors import EngineError, InputError, RefusedError
 from engine.greeks import GREEKS, GreekSlice, price_greeks
 from engine.market.chain import ChainExpiry, QuoteFlag, flag_words
 from engine.market.daycount import DAY_COUNTS, year_fraction
+from engine.models.bates import Bates
 from engine.models.black import Black
+from engine.models.double_heston import DoubleHeston
 from engine.models.heston import Heston
+from engine.models.merton import Merton
+from engine.models.variance_gamma import VarianceGamma
 from engine.protocols import Model, ParameterSpec
 from engine.slices import EXPIRY_RANGE, Slice
 from engine.smile import TOLERANCE_RANGE, PricedSlice, TransformReport, price_smiles
@@ -47,5 +51,5 @@ __all__ = [
     "year_fraction",
 ]
 
-_KINDS: tuple[type[Model], ...] = (Black, Heston)
+_KINDS: tuple[type[Model], ...] = (Black, Heston, Bates, Merton, VarianceGamma, DoubleHeston)
 MODELS: dict[str, type[Model]] = {kind.name: kind for kind in _KINDS}

@@ -39,7 +39,5 @@ class RefusedError(EngineError):
     """The value is meaningful but the engine refuses it: it would cost more than the stated limit."""
 
 
-def _rebuild(
-    kind: type[EngineError], argument: str, reason: str, index: tuple[int, ...], allowed: str
-) -> EngineError:
+def _rebuild(kind: type[EngineError], argument: str, reason: str, index: tuple[int, ...], allowed: str) -> EngineError:
     return kind(argument, reason, index=index, allowed=allowed)

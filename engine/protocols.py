@@ -71,6 +71,10 @@ class Model(Protocol):
         """Of a stacked object, the rows at ``index`` (shape (m,)): columns of shape (m, 1)."""
         ...
 
+    def columns(self) -> Floats:
+        """Of a stacked object, all parameters side by side, (rows, P): what tells two rows apart."""
+        ...
+
     def check(self) -> None:
         """Raise InputError naming the first parameter outside its range."""
         ...

@@ -8,21 +8,20 @@ Source: F. Black, "The pricing of commodity contracts", Journal of Financial Eco
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, ClassVar, Self
+from typing import Any, ClassVar
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats, Ints
-from engine.models.parameters import check_parameters, stack_columns, take_rows
+from engine.arrays import Complexes, Floats
+from engine.models.parameters import Columns
 from engine.protocols import CfGradient, ParameterSpec
 
 __all__ = ["Black"]
 
 
 @dataclass(frozen=True, slots=True)
-class Black:
+class Black(Columns):
     """Black's model. ``volatility``: a float, or a column of shape (rows, 1) after ``stack``."""
 
     volatility: Any
@@ -34,19 +33,6 @@ class Black:
         ParameterSpec("volatility", "per square root of a year", 0.0, 10.0, "Volatility (0.2 is 20 %)."),
     )
     sensitivity_names: ClassVar[tuple[str, ...]] = ("volatility",)
-
-    @classmethod
-    def stack(cls, models: Sequence[Self]) -> Self:
-        """One object with a column of shape (rows, 1) out of ``rows`` objects with floats."""
-        return cls(**stack_columns(models, ["volatility"]))
-
-    def take(self, index: Ints) -> Self:
-        """Of a stacked object, the rows at ``index``: columns of shape (m, 1)."""
-        return type(self)(**take_rows(self, ["volatility"], index))
-
-    def check(self) -> None:
-        """Raise InputError if the volatility is outside its range."""
-        check_parameters(self, self.parameters)
 
     def log_cf(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> Complexes:
         """``log E[exp(i z X)]``; entire in ``z``, so paths need no care."""

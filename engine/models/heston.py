@@ -16,15 +16,14 @@ currency options", Review of Financial Studies 6(2), 1993.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, fields
-from typing import Any, ClassVar, Self
+from dataclasses import dataclass
+from typing import Any, ClassVar
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats, Ints
+from engine.arrays import Complexes, Floats
 from engine.models.explosion import explosion_edges
-from engine.models.parameters import check_parameters, stack_columns, take_rows
+from engine.models.parameters import Columns
 from engine.models.variance_factor import FactorExponent, factor_exponent
 from engine.models.variance_gradient import factor_gradient
 from engine.protocols import CfGradient, ParameterSpec
@@ -49,7 +48,7 @@ HESTON_PARAMETERS = (
 
 
 @dataclass(frozen=True, slots=True)
-class Heston:
+class Heston(Columns):
     """Heston's model. Parameters: floats, or columns of shape (rows, 1) after ``stack``."""
 
     v0: Any
@@ -63,19 +62,6 @@ class Heston:
     source: ClassVar[str] = "S. Heston, Review of Financial Studies 6(2), 1993"
     parameters: ClassVar[tuple[ParameterSpec, ...]] = HESTON_PARAMETERS
     sensitivity_names: ClassVar[tuple[str, ...]] = ("v0", "kappa", "theta", "sigma", "rho")
-
-    @classmethod
-    def stack(cls, models: Sequence[Self]) -> Self:
-        """One object with columns of shape (rows, 1) out of ``rows`` objects with floats."""
-        return cls(**stack_columns(models, [f.name for f in fields(cls)]))
-
-    def take(self, index: Ints) -> Self:
-        """Of a stacked object, the rows at ``index``: columns of shape (m, 1)."""
-        return type(self)(**take_rows(self, [f.name for f in fields(self)], index))
-
-    def check(self) -> None:
-        """Raise InputError naming the first parameter outside its range."""
-        check_parameters(self, self.parameters)
 
     def _riccati(self, w: Any, along_path: bool) -> tuple[Any, Any, Any]:
         """``q``, ``b`` and ``D^2``."""
@@ -171,5 +157,5 @@ class Heston:
 
     def bend(self, tau: float) -> tuple[float, float]:
         """``k_inf = -rho (v0 + kappa theta tau) / sigma``; ``phi`` is analytic off the imaginary axis (Lucic 2007)."""
-        v0, kappa, theta, sigma, rho = (float(np.reshape(getattr(self, f.name), -1)[0]) for f in fields(self))
+        v0, kappa, theta, sigma, rho = self.row(0)
         return -rho * (v0 + kappa * theta * tau) / max(sigma, 1e-150), 0.5 * np.pi

@@ -34,7 +34,7 @@ from engine.transform.record import EPS
 
 __all__ = ["BentSum", "bent_sums"]
 
-_PROBE_STEP = 0.4
+_PROBE_STEP = 0.25
 _SHORT, _LONG = 16.0, 44.0  # |z| up to exp of it times b
 _CANDIDATES = ((0.8, 0.9), (0.8, 0.6), (0.55, 0.85), (0.55, 0.5), (0.3, 0.8), (0.3, 0.4))  # (share of angle, of gap)
 _MOST_NODES = 2000
@@ -130,7 +130,7 @@ def _choose(
         lift = z.imag + p
         level += np.maximum(lift * span[0], lift * span[1])
         level[np.isnan(level)] = np.inf
-        level -= log_scale
+        level += _between_probes(level) - log_scale
         weight = np.exp(level) * (2.0 * _PROBE_STEP / np.pi)
     weight = weight.reshape(len(kernels), 3, len(_CANDIDATES), probe.shape[0])
     start = weight[:, 0, :, :1]
@@ -152,6 +152,18 @@ def _choose(
         float(worst[best]),
         float(stop[best]),
     )
+
+
+def _between_probes(level: Floats) -> Floats:
+    """By how much a log-modulus may exceed its nearest probe between probes: a parabola does by an eighth of its second
+    difference; twice the largest one nearby is allowed for. A peak of ``exp(lambda exp(...))`` is that narrow."""
+    with np.errstate(invalid="ignore"):
+        mirrored = np.concatenate([level[..., 1:2], level], axis=-1)  # even in y, by conjugate symmetry
+        bent = np.abs(np.diff(mirrored, n=2, axis=-1))
+    bent = np.where(np.isnan(bent), 0.0, bent)
+    padded = np.concatenate([bent[..., :1], bent, bent[..., -1:], bent[..., -1:]], axis=-1)
+    widest = np.maximum(np.maximum(padded[..., :-2], padded[..., 1:-1]), padded[..., 2:])
+    return np.asarray(0.25 * widest)
 
 
 def _gap(plan: Plan, row: int) -> tuple[float, float]:
@@ -183,7 +195,7 @@ def _bent_sum(
     )
     h = 2.0 * np.pi * bend.d / decades
     stop = bend.stop if np.isfinite(bend.stop) else _LONG
-    count = min(int(np.ceil(stop / h)) + 2, _MOST_NODES)
+    count = min(max(int(np.ceil(stop / h)) + 2, 4), _MOST_NODES)
     h = float(max(h, stop / (count - 2)))
     z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count, dtype=np.float64))
     gradient: Any = None

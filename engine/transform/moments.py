@@ -26,6 +26,8 @@ __all__ = ["NOTHING", "SideMoments", "side_moments"]
 POINTS = 64
 _LOWEST = 0.15  # of 1/s, or of the way to the edge of a narrow strip: below it the pole at x = 0 dominates
 NOTHING = -700.0  # log of a value that is below the double range for every purpose
+_JUMP = 400.0  # twice what a normal log price shows at the end of the grid
+_CROWDED = 30.0  # the grid's last point comes this many times nearer to a cliff than the cliff is to 0
 _QUADRUPLINGS = 20
 _HIGHEST = 40.0  # of 1/s, at least: Gaussian aliases at exp(-40^2/2) underflow any double
 
@@ -85,6 +87,11 @@ def side_moments(model: Model, tau: Floats, reach: Reach) -> SideMoments:
     if short.any():  # the saddle of the farthest strike lies beyond: X is all but bounded on that side
         top = np.where(short[:, None], top * _farther(model, tau, scale, room, top, reach.far), top)
         x, log_m = _grid(model, tau, scale, room, top)
+    cliff = _cliff(x, log_m, reach.far)
+    soft = cliff < room[:, 0]
+    if soft.any():  # moments that exist but explode: the grid crowds there as towards an edge
+        top = np.where(soft[:, None], np.maximum(top, _CROWDED * cliff[:, None] * scale), top)
+        x, log_m = _grid(model, tau, scale, np.minimum(room, cliff[:, None]), top)
     log_x = np.log(x)
     log_1x = np.log1p(x)
     curvature = np.empty_like(x)
@@ -108,6 +115,16 @@ def _grid(model: Model, tau: Floats, scale: Floats, room: Floats, top: Floats) -
     g = np.exp(np.log(lowest) + np.linspace(0.0, 1.0, POINTS) * np.log(top / lowest)) / scale
     x = 1.0 / (1.0 / g + 1.0 / room)
     return x, _by_side(model, tau, x)
+
+
+def _cliff(x: Floats, log_m: Floats, far: Floats) -> Floats:
+    """The first grid point past the farthest strike's saddle to which ``log M`` jumps by more than ``_JUMP``, (2 S,);
+    inf if none."""
+    with np.errstate(invalid="ignore"):
+        jump = np.diff(log_m, axis=1)
+        level = log_m[:, 1:] - x[:, 1:] * np.maximum(far, 0.0)[:, None]
+        steep = ((jump > _JUMP) | np.isnan(jump)) & ~(level <= 0.0)
+    return np.where(steep.any(axis=1), x[np.arange(x.shape[0]), 1 + np.argmax(steep, axis=1)], np.inf)
 
 
 def _by_side(model: Model, tau: Floats, x: Floats) -> Floats:

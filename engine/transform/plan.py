@@ -50,6 +50,7 @@ class Plan:
     exponent: Floats
     period: Floats
     nodes: Ints  # 0: deformed contour
+    wanted: Floats  # nodes a straight contour needs, inf where no end of the sum was found
     log_target: Floats  # log of what each error piece may weigh, before the strike factor exp(-(p - 1) k)
     k_low: Floats
     k_high: Floats
@@ -121,7 +122,7 @@ def plan_rows(model: Model, tau: Floats, reach: Reach, *, tolerance: float, powe
         wanted = cut * period / (2.0 * np.pi) + 2.0
     plain = wanted <= PLAIN_LIMIT
     nodes = np.where(plain, _LADDER[np.searchsorted(_LADDER, np.where(plain, wanted, 1.0))], 0)
-    return Plan(slice_of, exponent, period, nodes, log_target, k_low, k_high, base, cuts, last, moments)
+    return Plan(slice_of, exponent, period, nodes, wanted, log_target, k_low, k_high, base, cuts, last, moments)
 
 
 def cover_key(alone: int, cover: _Cover) -> Ints:

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 from collections import OrderedDict
 from collections.abc import Callable, Hashable
-from dataclasses import fields
 from threading import Lock
 from typing import Any
 
@@ -38,7 +37,7 @@ def rows_of(
     count = tau.shape[0]
     if count > MOST_SLICES:
         return fresh(None)
-    columns = np.concatenate([np.reshape(getattr(model, f.name), (count, -1)) for f in fields(model)] + [tau], axis=1)
+    columns = np.concatenate([model.columns(), tau], axis=1)
     ends = np.stack([reach.near[:count], reach.near[count:], reach.far[:count], reach.far[count:]], axis=1)
     inputs = np.concatenate([columns, ends], axis=1) + 0.0  # no negative zeros
     keys = [(type(model), row.tobytes(), settings) for row in inputs]

@@ -22,6 +22,8 @@ from engine.transform.window import MARGIN, grid_length
 __all__ = ["Rows", "evaluate"]
 
 _BLOCK_NODES = 1 << 13  # nodes evaluated together: some 20 temporaries of 128 KiB each stay near the cache
+_LONGEST = 1 << 17  # nodes of a straight contour where no bend reaches the target: some 30 ms
+_MISSED = 8.0  # times its target: the bend is given up
 _MERGE = 1.6  # rows are given up to this many times the nodes they need when that saves a block of their own
 
 
@@ -57,7 +59,8 @@ class Rows:
 def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Rows:
     """All rows of a plan. ``model`` stacked over the S slices, ``tau`` (S, 1)."""
     count, kinds = plan.nodes.shape[0], len(kernels)
-    nodes, blocks = _blocks(plan)
+    bent = _bent(model, tau, plan, kernels)
+    nodes, blocks = _blocks(plan, _straightened(plan, bent))
     length = np.where(nodes > 0, np.array([grid_length(int(n)) for n in nodes]), 0)
     room = np.where(nodes > 0, length + 2 * MARGIN, 0)
     offset = np.concatenate([[0], np.cumsum(room)])
@@ -72,11 +75,8 @@ def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Ro
         pieces[:, rows] = found.pieces
         for i, r in enumerate(rows):
             grid[:, offset[r] : offset[r] + room[r]] = found.grid[:, i]
-    bent: dict[int, list[BentSum]] = {}
-    for r in np.flatnonzero(plan.nodes == 0):
-        one = plan.slice_of[r : r + 1]
-        bent[int(r)] = bent_sums(model.take(one), float(tau[one[0], 0]), plan, int(r), kernels)
-        nodes[r] = sum(part.iz.shape[0] for part in bent[int(r)])
+    for r, parts in bent.items():
+        nodes[r] = sum(part.iz.shape[0] for part in parts)
     slices = plan.base.shape[0] // 2
     first = np.searchsorted(plan.slice_of, np.arange(slices + 1))
     return Rows(
@@ -85,13 +85,35 @@ def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Ro
     )  # fmt: skip
 
 
-def _blocks(plan: Plan) -> tuple[Ints, list[Ints]]:
+def _bent(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> dict[int, list[BentSum]]:
+    """The rows left to the deformed contour."""
+    out: dict[int, list[BentSum]] = {}
+    for r in np.flatnonzero(plan.nodes == 0).tolist():
+        one = plan.slice_of[r : r + 1]
+        out[r] = bent_sums(model.take(one), float(tau[one[0], 0]), plan, r, kernels)
+    return out
+
+
+def _straightened(plan: Plan, bent: dict[int, list[BentSum]]) -> Ints:
+    """Nodes per row after rows whose bends all miss their target are taken back to long straight contours; those leave
+    ``bent``."""
+    nodes = plan.nodes.copy()
+    for r in list(bent):
+        target = plan.log_target[r] - np.array([part.log_scale for part in bent[r]])
+        missed = np.array([part.pieces[0] for part in bent[r]]) > _MISSED * np.exp(target)
+        if missed.any() and np.isfinite(plan.wanted[r]):
+            nodes[r] = min(1 << int(np.ceil(np.log2(plan.wanted[r]))), _LONGEST)
+            del bent[r]
+    return nodes
+
+
+def _blocks(plan: Plan, wanted: Ints) -> tuple[Ints, list[Ints]]:
     """Nodes given to each row (rows of a slice share a count where that is cheap), and row numbers grouped by them,
     at most ``_BLOCK_NODES`` nodes a group."""
     most = np.zeros(plan.base.shape[0], dtype=np.int64)
-    np.maximum.at(most, plan.slice_of, plan.nodes)
+    np.maximum.at(most, plan.slice_of, wanted)
     largest = most[plan.slice_of]
-    nodes = np.where((plan.nodes > 0) & (_MERGE * plan.nodes >= largest), largest, plan.nodes)
+    nodes = np.where((wanted > 0) & (_MERGE * wanted >= largest), largest, wanted)
     out: list[Ints] = []
     for size in np.unique(nodes):
         if size > 0:
