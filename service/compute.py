@@ -1,8 +1,8 @@
 """The only door from the event loop to the CPU: a few threads behind a bounded queue.
 
 Small requests are computed at once, on the loop: a change of thread costs more than a 50-strike smile takes away
-from others. How small is decided twice, by the number of strikes before and by the number of transform nodes once
-the engine has planned: a plan over the allowance is refused by the engine and the request goes to a thread.
+from others. How small is decided twice: by the numbers of strikes and slices beforehand, and by the number of transform
+nodes once the engine has planned; a plan over the allowance is refused by the engine and the request goes to a thread.
 """
 
 from __future__ import annotations
@@ -34,10 +34,12 @@ class Outcome:
 @dataclass(frozen=True, slots=True)
 class Task:
     """A request ready to be computed. ``work(node_limit)`` gives the outcome or raises; it touches nothing shared.
-    ``strikes`` in all say how large it is."""
+    ``strikes`` and ``slices`` say how large it is; ``light`` is false for work whose size they do not tell."""
 
     work: Callable[[int], Outcome]
     strikes: int
+    slices: int
+    light: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,9 +77,10 @@ class Compute:
 
     async def run(self, task: Task) -> Done:
         """Compute a task, here if it is small."""
-        if task.strikes <= self._settings.inline_strikes:
+        limits = self._settings
+        if task.light and task.strikes <= limits.inline_strikes and task.slices <= limits.inline_slices:
             try:
-                return _timed(task, self._settings.inline_nodes)
+                return _timed(task, limits.inline_nodes)
             except RefusedError:
                 pass
         return await self.away(lambda: self._within_limit(task))

@@ -49,6 +49,7 @@ class Settings(BaseModel):
     inline_strikes: int = Field(
         256, ge=0, description="Requests with at most so many strikes are computed without a change of thread."
     )
+    inline_slices: int = Field(4, ge=0, description="And only if they have at most so many slices.")
     inline_nodes: int = Field(
         4_096, ge=0, description="And only if they need at most so many transform nodes (about two milliseconds)."
     )

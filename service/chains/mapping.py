@@ -32,7 +32,7 @@ def plan(asked: ChainAsked, settings: Settings) -> Task:
     def work(_node_limit: int) -> Outcome:
         return Outcome(encode(_answer(build_surface(engine_chain(asked, years)), asked.spot)))
 
-    return Task(work, 4 * strikes)
+    return Task(work, strikes, len(asked.expiries), light=False)
 
 
 def _answer(surface: Surface, spot: float | None) -> dict[str, Any]:

@@ -58,7 +58,7 @@ def plan(asked: ImpliedVolsAsked, settings: Settings) -> Task:
         ]
         return Outcome(encode({"slices": slices, "warnings": warnings}))
 
-    return Task(work, count)
+    return Task(work, count, len(lengths))
 
 
 def _repeated(terms: list[SliceTerms], name: str, lengths: list[int]) -> NDArray[np.float64]:

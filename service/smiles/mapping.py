@@ -53,7 +53,7 @@ def plan(asked: SmilesAsked, settings: Settings) -> Task:
         nodes = sum(p.transform.nodes for p in priced)
         return Outcome(encode({"slices": found, "warnings": warnings}), nodes)
 
-    return Task(work, strikes)
+    return Task(work, strikes, len(slices))
 
 
 def _slice_answer(terms: SliceTerms, asked: Slice, priced: PricedSlice, outputs: Sequence[str]) -> dict[str, Any]:
