@@ -37,21 +37,16 @@ class Batch:
     payoffs: Bytes
     slice_of: Ints
     starts: Ints
+    lengths: Ints
     expiry: Floats
     forward: Floats
     discount: Floats
-
-    @property
-    def lengths(self) -> Ints:
-        """Strikes of each slice, (S,)."""
-        return np.diff(np.append(self.starts, self.strikes.shape[0]))
 
     def points(self, members: Ints) -> Ints:
         """Positions of the strikes of the given slices, in order."""
         if members.shape[0] == self.starts.shape[0]:
             return np.arange(self.strikes.shape[0])
-        lengths = self.lengths
-        return np.concatenate([np.arange(self.starts[i], self.starts[i] + lengths[i]) for i in members])
+        return np.concatenate([np.arange(self.starts[i], self.starts[i] + self.lengths[i]) for i in members])
 
 
 def side_by_side(slices: Sequence[Slice]) -> Batch:
@@ -66,9 +61,8 @@ def side_by_side(slices: Sequence[Slice]) -> Batch:
                 raise InputError(f"slices.{name}", f"is {value!r}", index=(i,), allowed=f"{low:g} to {high:g}")
         if s.strikes.ndim != 1 or s.strikes.shape[0] == 0:
             raise InputError("slices.strikes", "is empty", index=(i,), allowed="at least one strike")
-        bad = np.flatnonzero(~((s.strikes > 0.0) & np.isfinite(s.strikes)))
-        if bad.size:
-            at = int(bad[0])
+        if not (s.strikes.min() > 0.0 and s.strikes.max() < np.inf):
+            at = int(np.flatnonzero(~((s.strikes > 0.0) & np.isfinite(s.strikes)))[0])
             raise InputError(
                 "slices.strikes", f"is {float(s.strikes[at])!r}", index=(i, at), allowed="finite and above 0"
             )
@@ -78,8 +72,9 @@ def side_by_side(slices: Sequence[Slice]) -> Batch:
     return Batch(
         np.concatenate([s.strikes for s in slices]),
         np.concatenate([s.payoffs for s in slices]),
-        np.repeat(np.arange(len(slices)), lengths),
-        np.concatenate([[0], np.cumsum(lengths)[:-1]]),
+        np.arange(len(slices)).repeat(lengths),
+        lengths.cumsum() - lengths,
+        lengths,
         np.array([s.expiry for s in slices]),
         np.array([s.forward for s in slices]),
         np.array([s.discount_factor for s in slices]),

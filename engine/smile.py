@@ -107,8 +107,9 @@ def check_models(models: Model | Sequence[Model], count: int, tolerance: float) 
 def _report(contour: Contour | None) -> TransformReport:
     if contour is None:
         return TransformReport("closed_form", (), 0)
-    words = [w for w, on in (("contour_fft", not contour.bent.all()), ("deformed_contour", contour.bent.any())) if on]
-    return TransformReport("+".join(words), tuple(contour.exponents.tolist()), int(contour.nodes.sum()))
+    bent = contour.bent.tolist()
+    words = [word for word, on in (("contour_fft", not all(bent)), ("deformed_contour", any(bent))) if on]
+    return TransformReport("+".join(words), tuple(contour.exponents.tolist()), sum(contour.nodes.tolist()))
 
 
 def assemble_prices(
@@ -118,7 +119,9 @@ def assemble_prices(
 
     The kernels of every group begin with the vanilla; a digital, where payoffs ask for one, is among them.
     """
-    value, bound, p_value, p_bound = (np.zeros(k.shape) for _ in range(4))
+    value, bound = np.empty(k.shape), np.empty(k.shape)
+    sides = sides_of(batch)
+    p_value, p_bound = np.zeros(k.shape), np.zeros(k.shape)
     reports: dict[int, TransformReport] = {}
     for group in groups:
         value[group.at], bound[group.at] = group.value[0], group.bound[0]
@@ -127,7 +130,6 @@ def assemble_prices(
             p_value[group.at], p_bound[group.at] = group.value[row], group.bound[row]
         reports.update({int(i): _report(c) for i, c in zip(group.members, group.contours, strict=True)})
     forward, discount = batch.forward[batch.slice_of], batch.discount[batch.slice_of]
-    sides = sides_of(batch)
     intrinsic = np.where(sides.in_money, np.abs(forward - batch.strikes), 0.0)
     probability = np.where(sides.in_money, 1.0 - p_value, p_value)
     prices = discount * np.where(sides.digital, probability, value * forward + intrinsic)

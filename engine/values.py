@@ -87,7 +87,7 @@ def _group(
     if not closed.any():
         found = invert(model, tau, _strikes(k[at], lengths), tolerance=tolerance, kernels=kernels, limit=node_limit)
         return Group(members, at, lengths, model, kernels, found.value, found.bound, list(found.contours))
-    point_closed = np.repeat(closed, lengths)
+    point_closed = closed.repeat(lengths)
     value, bound = np.zeros((len(kernels), at.shape[0])), np.zeros((len(kernels), at.shape[0]))
     s = np.repeat(np.sqrt(variance), lengths)[point_closed]
     expiry = np.repeat(batch.expiry[members], lengths)[point_closed]
@@ -104,7 +104,7 @@ def _group(
 
 
 def _strikes(k: Floats, lengths: Ints) -> Strikes:
-    return Strikes(k, np.repeat(np.arange(lengths.shape[0]), lengths), np.cumsum(lengths) - lengths)
+    return Strikes(k, np.arange(lengths.shape[0]).repeat(lengths), lengths.cumsum() - lengths)
 
 
 def closed_form(kernels: list[Kernel], k: Floats, s: Floats, tau: Floats) -> tuple[Floats, Floats]:

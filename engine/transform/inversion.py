@@ -23,13 +23,12 @@ from engine.transform.moments import NOTHING
 from engine.transform.plan import Plan, plan_rows
 from engine.transform.reach import Strikes, reach_of
 from engine.transform.record import EPS, RowValues, assemble
-from engine.transform.rows import Rows, evaluate
+from engine.transform.rows import Rows, counted_nodes, evaluate
 from engine.transform.window import sums_at
 
 __all__ = ["Contour", "Inversion", "invert"]
 
 _CHUNK = 64  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
-_HARD_NODES = 4096  # what a bent row is counted as against the node limit: its probes and its sum
 _NOTHING = float(np.exp(NOTHING))
 _MOST_APART = 64  # missed strikes that are then planned one by one
 _TIGHTEST = 2.0**-16  # of the tolerance, for the second plan
@@ -133,11 +132,11 @@ def _prepared(
         return evaluate(sub, sub_tau, plan, kernels)
 
     rows = plan_cache.rows_of(model, tau, reach, (tolerance, tuple(kernels)), fresh)
-    return rows, limit - int(np.sum(np.where(rows.length > 0, rows.nodes, _HARD_NODES)))
+    return rows, limit - rows.counted
 
 
 def _counted(plan: Plan) -> int:
-    return int(np.sum(np.where(plan.nodes > 0, plan.nodes, _HARD_NODES)))
+    return counted_nodes(plan.nodes, plan.nodes)
 
 
 def _contours(rows: Rows) -> list[Contour]:
@@ -174,11 +173,10 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
         totals = sums_at(rows.grid, rows.offset[row], rows.length[row], -k / period)
     growth = np.exp(k)
     value, bound = np.empty_like(totals), np.empty_like(totals)
-    straight_row = rows.length[row] > 0 if rows.bent else True
     for i, kernel in enumerate(kernels):
-        aliases, alias_size = kernel.exact_aliases(exponent, period, k)
-        if rows.bent:
-            aliases, alias_size = np.where(straight_row, aliases, 0.0), np.where(straight_row, alias_size, 0.0)
+        flat, growing, flat_cap, growing_cap = rows.aliases[:, i, row]
+        aliases = flat + growth * growing
+        alias_size = flat_cap + growth * growing_cap * (1.0 + np.abs(k))
         raw = assemble(
             total=totals[i],
             log_scale=log_scale,
@@ -190,7 +188,7 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
             aliases=aliases,
             alias_size=alias_size,
         )
-        found = out_of_the_money(kernel, raw, exponent, k, growth)
+        found = out_of_the_money(kernel, raw, exponent, k, growth, rows.middle[row])
         value[i], bound[i] = found.value, found.bound
     beyond = np.abs(k) > rows.last[side]
     if beyond.any():
@@ -200,7 +198,9 @@ def _at_strikes(rows: Rows, strikes: Strikes, kernels: list[Kernel]) -> tuple[Fl
     return value, bound
 
 
-def out_of_the_money(kernel: Kernel, raw: RowValues, exponent: Floats, k: Floats, growth: Floats) -> RowValues:
+def out_of_the_money(
+    kernel: Kernel, raw: RowValues, exponent: Floats, k: Floats, growth: Floats, middle: Any
+) -> RowValues:
     """Raw values to those of the out-of-the-money side: direct or by the complement where the row is on the other
     one."""
     if not kernel.markov:
@@ -208,16 +208,16 @@ def out_of_the_money(kernel: Kernel, raw: RowValues, exponent: Floats, k: Floats
         return RowValues(np.where(lost, 0.0, raw.value), np.where(lost, np.inf, raw.bound)) if lost.any() else raw
     if kernel.order == 2:
         most = np.minimum(1.0, growth)
-        other = (exponent > 0.0) & (exponent < 1.0)
-        value = np.where(other, raw.value + most, raw.value)
+        other = middle * most  # a row between the poles gives the value less this
+        value, bound = raw.value + other, raw.bound + 2.0 * EPS * other
     else:  # the raw value is P(X > k), else -P(X < k), under the measure of the shift
         most = np.ones_like(k)
         above = exponent > kernel.shift
-        other = above != (k >= 0.0)
+        complement = above != (k >= 0.0)
         size = np.where(above, raw.value, -raw.value)
-        value = np.where(other, 1.0 - size, size)
-    bound = raw.bound + np.where(other, 2.0 * EPS, 0.0) * most
-    lost = np.isnan(value) | ~(bound <= most)  # nothing but the interval is known
+        value = np.where(complement, 1.0 - size, size)
+        bound = raw.bound + 2.0 * EPS * complement
+    lost = ~(bound <= most) | np.isnan(value)  # nothing but the interval is known
     if lost.any():
         value, bound = np.where(np.isnan(value), 0.0, value), np.where(lost, most, bound)
-    return RowValues(np.clip(value, 0.0, most), bound)
+    return RowValues(np.minimum(np.maximum(value, 0.0), most), bound)

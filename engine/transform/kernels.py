@@ -26,6 +26,8 @@ from typing import Any
 
 import numpy as np
 
+from engine.arrays import Floats
+
 __all__ = ["DENSITY", "DENSITY_SLOPE", "DIGITAL", "GROWTH", "SHARE_DIGITAL", "VANILLA", "Kernel"]
 
 GROWTH = 2  # no d log phi / d parameter of the models here grows faster than |z|^2 along a line
@@ -63,22 +65,24 @@ class Kernel:
             return 1.0 / (iz - self.shift)
         return np.ones_like(iz) if self.order == 0 else -iz
 
-    def exact_aliases(self, p: Any, period: Any, k: Any) -> tuple[Any, Any]:
-        """The closed-form part of the aliases and a cap on its rounding error in units of machine epsilon."""
+    def exact_aliases(self, p: Floats, period: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+        """The closed-form part of the aliases of each row, ``flat + e^k growing``, and the caps on the rounding of
+        the two coefficients in units of machine epsilon: ``(flat, growing, flat cap, growing cap)``, shape of ``p``."""
+        none = np.zeros_like(p)
         if not self.markov:
-            return 0.0, 0.0
+            return none, none, none, none
         if self.order == 1:
-            geometric, size = _geometric(np.abs(p - self.shift) * period, 0.0)
-            return np.where(p > self.shift, geometric, -geometric), size
-        by_p, size_p = _geometric(np.abs(p) * period, k)
-        by_a, size_a = _geometric(np.abs(p - 1.0) * period, 0.0)
-        return np.where(p > 1.0, by_a, -by_a) + np.where(p < 0.0, by_p, -by_p), size_p + size_a
+            geometric, size = _geometric(np.abs(p - self.shift) * period)
+            return np.where(p > self.shift, geometric, -geometric), none, size, none
+        by_p, size_p = _geometric(np.abs(p) * period)
+        by_a, size_a = _geometric(np.abs(p - 1.0) * period)
+        return np.where(p > 1.0, by_a, -by_a), np.where(p < 0.0, by_p, -by_p), size_a, size_p
 
 
-def _geometric(far: Any, k: Any) -> tuple[Any, Any]:
-    """``e^k sum_{m >= 1} exp(-m far)`` and its rounding: the exponents' own and a few units."""
-    value = np.exp(k - far) / -np.expm1(-far)
-    return value, value * (6.0 + far + np.abs(k))
+def _geometric(far: Floats) -> tuple[Floats, Floats]:
+    """``sum_{m >= 1} exp(-m far)`` and its rounding: the exponent's own and a few units."""
+    value = np.exp(-far) / -np.expm1(-far)
+    return value, value * (6.0 + far)
 
 
 VANILLA = Kernel("vanilla", 1.0, 2)

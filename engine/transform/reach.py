@@ -13,6 +13,7 @@ from engine.arrays import Floats, Ints
 
 __all__ = ["Reach", "Strikes", "reach_of"]
 
+_SMALLEST = 5e-324
 _CELLS = 8.0  # cells per standard deviation, rounded down to a power of two in ``k``
 
 
@@ -33,7 +34,7 @@ class Strikes:
 @dataclass(frozen=True, slots=True)
 class Reach:
     """``near <= |k| <= far`` of the strikes on each side, (2 S,): calls first, then puts; ``far < 0`` where there is
-    none."""
+    none. With strikes on both sides ``near`` is 0."""
 
     near: Floats
     far: Floats
@@ -54,11 +55,11 @@ class Reach:
 
 def reach_of(strikes: Strikes, scale: Floats, *, rounded: bool = True) -> Reach:
     """The reach of every side, rounded outward or exact. ``scale`` (S,): standard deviation of ``X``, > 0."""
-    kr = np.abs(strikes.k)
-    call = strikes.k >= 0.0
-    far_all = np.concatenate([np.maximum.reduceat(np.where(c, kr, -np.inf), strikes.starts) for c in (call, ~call)])
-    near_all = np.concatenate([np.minimum.reduceat(np.where(c, kr, np.inf), strikes.starts) for c in (call, ~call)])
-    used = far_all >= 0.0
+    low = np.minimum.reduceat(strikes.k, strikes.starts)
+    high = np.maximum.reduceat(strikes.k, strikes.starts)
+    far_all = np.concatenate([high, -low])
+    near_all = np.maximum(np.concatenate([low, -high]), 0.0)
+    used = far_all >= np.concatenate([np.zeros(low.shape), np.full(low.shape, _SMALLEST)])  # k = 0 is a call's
     if rounded:
         cell = np.tile(np.exp2(np.floor(np.log2(scale / _CELLS))), 2)
         far_all, near_all = np.ceil(far_all / cell) * cell, np.floor(near_all / cell) * cell

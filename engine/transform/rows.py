@@ -8,6 +8,7 @@ bent rows keep their terms and are summed directly.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -22,6 +23,7 @@ from engine.transform.window import MARGIN, grid_length
 __all__ = ["Rows", "evaluate"]
 
 _BLOCK_NODES = 1 << 13  # nodes evaluated together: some 20 temporaries of 128 KiB each stay near the cache
+HARD_NODES = 4096
 _LONGEST = 1 << 17  # nodes of a straight contour where no bend reaches the target: some 30 ms
 _MISSED = 8.0  # times its target: the bend is given up
 _MERGE = 1.6  # rows are given up to this many times the nodes they need when that saves a block of their own
@@ -46,6 +48,9 @@ class Rows:
     rounding: Floats
     slope: Floats
     pieces: Floats
+    aliases: Floats  # (4, K, R): ``flat``, ``growing`` and their caps, of ``Kernel.exact_aliases``
+    middle: Any  # (R,): exponents inside (0, 1)
+    counted: int  # nodes, as counted against a limit
     bent: dict[int, list[BentSum]] = field(default_factory=dict)
 
     @property
@@ -81,8 +86,23 @@ def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Ro
     first = np.searchsorted(plan.slice_of, np.arange(slices + 1))
     return Rows(
         plan.exponent, plan.period, nodes, first, plan.base, plan.cuts, plan.last, offset[:-1], length, grid, log_scale,
-        rounding, slope, pieces, bent,
+        rounding, slope, pieces, _aliases(plan, length, kernels), (plan.exponent > 0.0) & (plan.exponent < 1.0),
+        counted_nodes(nodes, length), bent,
     )  # fmt: skip
+
+
+def _aliases(plan: Plan, length: Ints, kernels: list[Kernel]) -> Floats:
+    """Closed-form aliases of every kernel and row; bent rows have none."""
+    out = np.empty((4, len(kernels), length.shape[0]))
+    for i, kernel in enumerate(kernels):
+        out[:, i] = kernel.exact_aliases(plan.exponent, plan.period)
+    out[:, :, length == 0] = 0.0
+    return out
+
+
+def counted_nodes(nodes: Ints, length: Ints) -> int:
+    """What rows count against the node limit: their nodes, and a lump for a bent one's probes and sum."""
+    return int(np.where(length > 0, nodes, HARD_NODES).sum())
 
 
 def _bent(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> dict[int, list[BentSum]]:
@@ -133,6 +153,7 @@ def cut(rows: Rows, s: int) -> Rows:
         rows.exponent[a:b], rows.period[a:b], rows.nodes[a:b], np.array([0, b - a]), rows.base[side] - a,
         rows.cuts[side], rows.last[side], rows.offset[a:b] - lo, rows.length[a:b], rows.grid[:, lo:hi].copy(),
         rows.log_scale[a:b], rows.rounding[:, a:b], rows.slope[:, a:b], rows.pieces[:, a:b],
+        rows.aliases[:, :, a:b], rows.middle[a:b], counted_nodes(rows.nodes[a:b], rows.length[a:b]),
         {r - a: parts for r, parts in rows.bent.items() if a <= r < b},
     )  # fmt: skip
 
@@ -162,5 +183,8 @@ def join(parts: list[Rows]) -> Rows:
         np.concatenate([part.rounding for part in parts], axis=1),
         np.concatenate([part.slope for part in parts], axis=1),
         np.concatenate([part.pieces for part in parts], axis=1),
+        np.concatenate([part.aliases for part in parts], axis=2),
+        np.concatenate([part.middle for part in parts]),
+        sum(part.counted for part in parts),
         {r + int(counts[i]): bent for i, part in enumerate(parts) for r, bent in part.bent.items()},
     )
