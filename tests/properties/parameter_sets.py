@@ -54,9 +54,48 @@ def _black(u: Sequence[float]) -> dict[str, Any]:
     return {"volatility": _spread(u[0], 1e-4, 10.0)}
 
 
+def _signed(u: float, low: float, high: float) -> float:
+    return _spread(2.0 * u, low, high) if u < 0.5 else -_spread(2.0 * u - 1.0, low, high)
+
+
+def _jumps(u: Sequence[float]) -> dict[str, Any]:
+    return {
+        "jump_intensity": _or_zero(u[0], 1e-3, 100.0),
+        "jump_mean": _signed(u[1], 1e-3, 1.0),
+        "jump_stdev": _or_zero(u[2], 1e-3, 1.0),
+    }
+
+
+def _merton(u: Sequence[float]) -> dict[str, Any]:
+    return {"volatility": _spread(u[0], 1e-3, 5.0), **_jumps(u[1:])}
+
+
+def _bates(u: Sequence[float]) -> dict[str, Any]:
+    """Nine coordinates. Jumps of nearly one size leave the reference no contour: the deviation is at least a sixth of
+    the mean, and Merton's model, which has a series, stands in for the rest."""
+    jumps = _jumps(u[6:])
+    jumps["jump_stdev"] = max(jumps["jump_stdev"], abs(jumps["jump_mean"]) / 6.0)
+    return {**_heston(u[:6]), **jumps}
+
+
+def _double_heston(u: Sequence[float]) -> dict[str, Any]:
+    return {"factors": [_heston(u[:6]), _heston(u[6:])]}
+
+
+def _variance_gamma(u: Sequence[float]) -> dict[str, Any]:
+    """Three coordinates; ``nu`` is kept where the forward exists, up to 999 parts in 1000 of that range."""
+    sigma, theta = _spread(u[0], 1e-2, 3.0), _signed(u[1], 1e-3, 3.0)
+    pull = theta + 0.5 * sigma * sigma
+    return {"sigma": sigma, "theta": theta, "nu": min(_spread(u[2], 1e-3, 20.0), 0.999 / pull if pull > 0.0 else 20.0)}
+
+
 _MAKERS: dict[str, tuple[int, Callable[[Sequence[float]], dict[str, Any]]]] = {
     "black": (1, _black),
     "heston": (6, _heston),
+    "bates": (9, _bates),
+    "merton": (4, _merton),
+    "variance_gamma": (3, _variance_gamma),
+    "double_heston": (12, _double_heston),
 }
 DIMENSIONS = {name: size for name, (size, _) in _MAKERS.items()}
 
@@ -70,7 +109,10 @@ def pair(name: str, u: Sequence[float]) -> tuple[Any, Any]:
 
 def twins(name: str, values: dict[str, Any]) -> tuple[Any, Any]:
     """The engine's model and the reference's from parameters by their public names."""
-    return MODELS[name](**values), reference_model(name, values)
+    twin = reference_model(name, values)
+    if name == "double_heston":
+        return MODELS[name](factors=tuple(MODELS["heston"](**factor) for factor in values["factors"])), twin
+    return MODELS[name](**values), twin
 
 
 def unit_cube(size: int) -> SearchStrategy[list[float]]:

@@ -77,6 +77,7 @@ def test_quick_sets() -> None:
     print(f"Heston against the reference: {tally}")
     assert tally.smiles >= QUICK_SETS
     assert tally.judged > 0.8 * tally.prices
+    assert tally.unknown == 0
 
 
 # Sets that once went wrong, each for a reason of its own; strikes in standard deviations.
@@ -125,6 +126,7 @@ def test_long_run() -> None:
     tally = run(LONG_SETS, seed=20, workers=2)
     print(f"Heston against the reference: {tally}")
     assert tally.smiles > 0.9 * LONG_SETS
+    assert tally.unknown == 0
     assert not tally.faults, "\n".join(tally.faults[:20])
 
 

@@ -9,7 +9,7 @@ Everything here speaks ``M(w) = E[exp(w X)]`` with ``X = ln(S_T / F)`` and compl
 - ``edges(bits=None)``: the open interval of finite moments from inside, to full precision or, where a search is needed,
   to the bits asked for;
 - ``slope()``: the ``s`` in ``log M(w) ~ s w`` as ``|w|`` grows in the upper half plane (``None``: Gaussian decay);
-- ``sector``: the open range of angles of ``w`` in which a contour may be bent;
+- ``sector(p)``: the open range of angles in which a contour through ``p`` may leave the real axis;
 - ``extra_digits()``: decimal digits lost to cancellation inside the formulas.
 
 Heston's function is the cosh/sinh solution of its Riccati equation (Heston 1993, Rev. Financ. Stud. 6(2); the
@@ -22,6 +22,7 @@ equation itself and published prices in ``test_mp_prices_selfcheck.py``.
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -29,7 +30,6 @@ import gmpy2
 from gmpy2 import mpc, mpfr
 
 __all__ = [
-    "STRAIGHT",
     "Bates",
     "Black",
     "DoubleHeston",
@@ -43,7 +43,6 @@ __all__ = [
 
 INF = float("inf")
 QUARTER = (math.pi / 4, 3 * math.pi / 4)
-STRAIGHT = (math.pi / 2, math.pi / 2)
 
 
 def _real(w: Any) -> bool:
@@ -55,17 +54,20 @@ class Black:
     """Black (1976): ``X`` normal with variance ``volatility^2 tau``."""
 
     volatility: Any
-    sector = STRAIGHT
 
     def prepare(self, tau: Any) -> _Gaussian:
         return _Gaussian(mpfr(self.volatility) ** 2 * mpfr(tau))
 
 
 class _Gaussian:
-    sector = STRAIGHT
-
     def __init__(self, variance: Any) -> None:
         self.variance = variance
+
+    def sector(self, p: Any) -> tuple[float, float]:
+        return QUARTER
+
+    def drift(self) -> Any:
+        return mpc(-self.variance / 2)
 
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         return self.variance / 2 * w * (w - 1), None
@@ -113,7 +115,8 @@ class Heston:
 
 
 class _HestonAt:
-    sector = QUARTER
+    def sector(self, p: Any) -> tuple[float, float]:
+        return QUARTER
 
     def __init__(self, model: Heston, tau: Any) -> None:
         self.v0, self.kappa, self.theta = mpfr(model.v0), mpfr(model.kappa), mpfr(model.theta)
@@ -214,14 +217,13 @@ class _HestonAt:
 class DoubleHeston:
     """Christoffersen, Heston and Jacobs (2009): two independent Heston factors add in the logarithm of the spot."""
 
-    first: Heston
-    second: Heston
+    factors: tuple[Heston, Heston]
 
     def extra_digits(self, tau: Any) -> int:
-        return max(self.first.extra_digits(tau), self.second.extra_digits(tau))
+        return max(factor.extra_digits(tau) for factor in self.factors)
 
     def prepare(self, tau: Any) -> Any:
-        return _Sum([self.first.prepare(tau), self.second.prepare(tau)])
+        return _Sum([factor.prepare(tau) for factor in self.factors])
 
 
 @dataclass(frozen=True)
@@ -236,6 +238,18 @@ class Merton:
     def prepare(self, tau: Any) -> Any:
         jumps = _GaussianJumps(self.jump_intensity, self.jump_mean, self.jump_stdev, tau)
         return _Sum([Black(self.volatility).prepare(tau), jumps])
+
+    def mixture(self, tau: Any) -> Iterator[tuple[Any, Any, Any]]:
+        """Given the number of jumps the price is lognormal: weights, log forwards, variances, after the mean number."""
+        count, mean = mpfr(self.jump_intensity) * mpfr(tau), mpfr(self.jump_mean)
+        square, variance = mpfr(self.jump_stdev) ** 2, mpfr(self.volatility) ** 2 * mpfr(tau)
+        weight = gmpy2.exp(-count)
+        drift = -count * gmpy2.expm1(mean + square / 2)
+        n = 0
+        while True:
+            yield weight, drift + n * (mean + square / 2), variance + n * square
+            n += 1
+            weight *= count / n
 
 
 @dataclass(frozen=True)
@@ -264,12 +278,26 @@ class Bates:
 
 
 class _GaussianJumps:
-    sector = STRAIGHT
+    """Within 45 degrees of the imaginary axis ``J(w) = exp(mean w + stdev^2 w^2 / 2)`` dies out; the drift is left."""
 
     def __init__(self, intensity: Any, mean: Any, stdev: Any, tau: Any) -> None:
         self.count = mpfr(intensity) * mpfr(tau)
         self.mean, self.half = mpfr(mean), mpfr(stdev) ** 2 / 2
         self.compensator = gmpy2.exp(self.mean + self.half) - 1
+
+    def sector(self, p: Any) -> tuple[float, float]:
+        """A line that leaves ``p`` leaning by ``a`` first sees ``|J|`` grow: by the exponential of ``(m sin a)^2`` over
+        ``4 half cos 2a``, ``m = mean + 2 half p``. ``a`` is kept so small that the jumps' exponent grows by 2 at most.
+        """
+        if self.count == 0:
+            return QUARTER
+        slope = abs(self.mean + 2 * self.half * p)
+        at_p = self.count * gmpy2.exp(p * (self.mean + self.half * p))
+        growth = float(gmpy2.log1p(2 / at_p))
+        bend = 4 * float(self.half / slope**2) * growth if slope != 0 else INF
+        lean = math.pi / 4 if math.isinf(bend) else math.asin(math.sqrt(bend / (1 + 2 * bend)))
+        lean = max(lean, 0.02)
+        return math.pi / 2 - lean, math.pi / 2 + lean
 
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         if self.count == 0:
@@ -280,7 +308,7 @@ class _GaussianJumps:
         return -INF, INF
 
     def slope(self) -> Any:
-        return None
+        return mpc(-self.count * self.compensator)
 
     def width(self) -> float:
         return math.sqrt(float(self.count * (self.mean**2 + 2 * self.half)))
@@ -291,8 +319,6 @@ class _Sum:
 
     def __init__(self, parts: list[Any]) -> None:
         self.parts = parts
-        narrowest = [part.sector for part in parts]
-        self.sector = STRAIGHT if STRAIGHT in narrowest else narrowest[0]
 
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         total, states = mpc(0), []
@@ -306,9 +332,15 @@ class _Sum:
         pairs = [part.edges(bits=bits) for part in self.parts]
         return max(pair[0] for pair in pairs), min(pair[1] for pair in pairs)
 
+    def sector(self, p: Any) -> tuple[float, float]:
+        sectors = [part.sector(p) for part in self.parts]
+        return max(sector[0] for sector in sectors), min(sector[1] for sector in sectors)
+
     def slope(self) -> Any:
         slopes = [part.slope() for part in self.parts]
-        return None if any(s is None for s in slopes) else sum(slopes, mpc(0))
+        if all(s is None for s in slopes):
+            return None
+        return sum((part.drift() if s is None else s for part, s in zip(self.parts, slopes, strict=True)), mpc(0))
 
     def width(self) -> float:
         return math.sqrt(sum(part.width() ** 2 for part in self.parts))
@@ -327,7 +359,8 @@ class VarianceGamma:
 
 
 class _VarianceGammaAt:
-    sector = (0.0, math.pi)
+    def sector(self, p: Any) -> tuple[float, float]:
+        return (0.0, math.pi)
 
     def __init__(self, model: VarianceGamma, tau: Any) -> None:
         self.nu, self.power = mpfr(model.nu), mpfr(tau) / mpfr(model.nu)
@@ -363,7 +396,8 @@ class NormalInverseGaussian:
 
 
 class _NormalInverseGaussianAt:
-    sector = (0.0, math.pi)
+    def sector(self, p: Any) -> tuple[float, float]:
+        return (0.0, math.pi)
 
     def __init__(self, model: NormalInverseGaussian, tau: Any) -> None:
         self.alpha, self.beta, self.scale = mpfr(model.alpha), mpfr(model.beta), mpfr(model.delta) * mpfr(tau)
@@ -399,7 +433,8 @@ class Kou:
 
 
 class _ExponentialJumps:
-    sector = STRAIGHT
+    def sector(self, p: Any) -> tuple[float, float]:
+        return QUARTER
 
     def __init__(self, model: Kou, tau: Any) -> None:
         self.count, self.up = mpfr(model.jump_intensity) * mpfr(tau), mpfr(model.up)
@@ -416,16 +451,29 @@ class _ExponentialJumps:
         return -self.rate_down, self.rate_up
 
     def slope(self) -> Any:
-        return None
+        return mpc(-self.count * self.compensator)
 
     def width(self) -> float:
         second = 2 * self.up / self.rate_up**2 + 2 * (1 - self.up) / self.rate_down**2
         return math.sqrt(float(self.count * second))
 
 
+_BY_NAME: dict[str, Any] = {
+    "black": Black,
+    "heston": Heston,
+    "bates": Bates,
+    "merton": Merton,
+    "variance_gamma": VarianceGamma,
+    "kou": Kou,
+    "normal_inverse_gaussian": NormalInverseGaussian,
+}
+
+
 def reference_model(name: str, parameters: dict[str, Any]) -> Any:
     """The reference twin of a model of the engine, from its name and its parameters by their public names."""
-    plain = {"black": Black, "heston": Heston, "bates": Bates, "merton": Merton, "variance_gamma": VarianceGamma}
-    if name in plain:
-        return plain[name](**parameters)
+    if name == "double_heston":
+        first, second = (Heston(**factor) for factor in parameters["factors"])
+        return DoubleHeston((first, second))
+    if name in _BY_NAME:
+        return _BY_NAME[name](**parameters)
     raise KeyError(f"no reference for the model {name!r}: write one before it may be priced")

@@ -20,7 +20,7 @@ from tests.reference.mp_models import (
     NormalInverseGaussian,
     VarianceGamma,
 )
-from tests.reference.mp_prices import digital, moment_strip, otm_value, sensitivity
+from tests.reference.mp_prices import digital, moment_strip, otm_value, otm_values, sensitivity
 from tests.reference.mp_series import (
     black_otm,
     heston_log_moment_by_ode,
@@ -157,11 +157,18 @@ def test_variance_gamma_by_its_mixture(k: float) -> None:
 
 
 @pytest.mark.parametrize("k", [-1.5, -0.1, 0.0, 0.4, 2.0])
-@pytest.mark.parametrize("tau", [1 / 365, 2.0])
-def test_merton_by_its_series(k: float, tau: float) -> None:
-    values = {"volatility": 0.2, "jump_intensity": 0.7, "jump_mean": -0.15, "jump_stdev": 0.25}
+@pytest.mark.parametrize(
+    ("volatility", "stdev", "tau"), [(0.2, 0.25, 1 / 365), (0.2, 0.25, 2.0), (1e-3, 0.01, 0.5), (0.0, 0.25, 1.0)]
+)
+def test_merton_by_its_series(k: float, volatility: float, stdev: float, tau: float) -> None:
+    values = {"volatility": volatility, "jump_intensity": 0.7, "jump_mean": -0.15, "jump_stdev": stdev}
     expected = merton_otm_by_series(k, tau, call=k >= 0, **values)
-    assert near(otm_value(Merton(**values), tau, k, digits=25), expected, "1e-22")
+    mixed = otm_values(Merton(**values), tau, 1.0, [math.exp(k)], digits=25)[0]
+    with mpmath.workdps(50):
+        again = merton_otm_by_series(mpmath.log(mpmath.mpf(math.exp(k))), tau, call=k >= 0, **values)
+    assert near(mixed, again, "1e-22")
+    if expected > mpmath.mpf("1e-400"):
+        assert near(otm_value(Merton(**values), tau, k, digits=25), expected, "1e-22")
 
 
 @pytest.mark.parametrize(("k", "s"), [(0.1, 0.02), (0.1, 0.0033), (-1.0, 0.3), (0.0, 0.5), (3.0, 8.0), (-0.02, 1e-3)])
@@ -183,7 +190,8 @@ AWKWARD = [
     (Heston(0.02, 3.0, 0.03, 1e-6, 0.5), 0.5),
     (Heston(0.0175, 1.5768, 0.0398, 13.5, -0.5711), 4.0),
     (Bates(0.04, 2.0, 0.06, 0.4, -0.7, 0.3, -0.1, 0.15), 1.0),
-    (DoubleHeston(Heston(0.03, 3.0, 0.03, 0.5, -0.8), Heston(0.01, 0.3, 0.05, 0.9, 0.4)), 1.5),
+    (Bates(0.001, 0.2, 0.01, 4.0, 0.99, 3.0, 0.3, 0.1), 2.0),
+    (DoubleHeston((Heston(0.03, 3.0, 0.03, 0.5, -0.8), Heston(0.01, 0.3, 0.05, 0.9, 0.4))), 1.5),
     (Kou(0.16, 1.0, 0.4, 10.0, 5.0), 0.5),
     (NormalInverseGaussian(8.9932, -4.5176, 1.1528), 1.0),
     (VarianceGamma(0.12, -0.14, 0.2), 0.02),
