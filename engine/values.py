@@ -33,6 +33,7 @@ from engine.transform.reach import Strikes
 __all__ = ["Group", "kernel_values"]
 
 _EPS = float(np.finfo(np.float64).eps)
+_NO_VARIANCE = 1e-32  # total variance below which every vanilla is worth less than rounding of the forward
 _TINY = float(np.finfo(np.float64).tiny)
 
 
@@ -82,7 +83,7 @@ def _group(
     at = batch.points(members)
     tau = batch.expiry[members][:, None]
     variance = np.reshape(model.mean_variance(tau), -1)
-    closed = (variance == 0.0) | isinstance(model, Black)
+    closed = (variance < _NO_VARIANCE) | isinstance(model, Black)
     lengths = batch.lengths[members]
     if not closed.any():
         found = invert(model, tau, _strikes(k[at], lengths), tolerance=tolerance, kernels=kernels, limit=node_limit)
@@ -92,6 +93,8 @@ def _group(
     s = np.repeat(np.sqrt(variance), lengths)[point_closed]
     expiry = np.repeat(batch.expiry[members], lengths)[point_closed]
     value[:, point_closed], bound[:, point_closed] = closed_form(kernels, k[at][point_closed], s, expiry)
+    if not isinstance(model, Black):
+        bound[:, point_closed] += _degenerate(kernels, s)
     contours: list[Contour | None] = [None] * members.shape[0]
     rest = np.flatnonzero(~closed)
     if rest.shape[0]:
@@ -101,6 +104,16 @@ def _group(
         for i, contour in zip(rest, found.contours, strict=True):
             contours[i] = contour
     return Group(members, at, lengths, model, kernels, value, bound, contours)
+
+
+def _degenerate(kernels: list[Kernel], s: Floats) -> Floats:
+    """What is not known of a law whose deviation ``s`` is all but nothing, (K, n): a vanilla is at most ``E|e^X -
+    1|``, about ``s``."""
+    out = np.zeros((len(kernels), s.shape[0]))
+    for i, kernel in enumerate(kernels):
+        unknown = np.inf if not kernel.markov else 1.0
+        out[i] = np.where(s == 0.0, 0.0, 2.0 * s if kernel.markov and kernel.order == 2 else unknown)
+    return out
 
 
 def _strikes(k: Floats, lengths: Ints) -> Strikes:

@@ -193,10 +193,7 @@ def _bent_sum(
     decades = (
         max(float(np.log(bend.worst) - plan.log_target[row]) + log_scale, 1.0) if np.isfinite(bend.worst) else 60.0
     )
-    h = 2.0 * np.pi * bend.d / decades
-    stop = bend.stop if np.isfinite(bend.stop) else _LONG
-    count = min(max(int(np.ceil(stop / h)) + 2, 4), _MOST_NODES)
-    h = float(max(h, stop / (count - 2)))
+    count, h = _steps(bend, decades)
     z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count, dtype=np.float64))
     gradient: Any = None
     gradient_size: Any = None
@@ -213,23 +210,33 @@ def _bent_sum(
         discretisation = bend.hardy / np.expm1(min(2.0 * np.pi * bend.d / h, 700.0))
         largest = np.exp(np.maximum(lift * (span[0] - k_near), lift * (span[1] - k_near)))
     base[0] *= 0.5
+    lost = size[0] + 8.0 + 0.5 * np.log2(count)
     psi = np.empty((len(kernels), count), dtype=np.complex128)
     rounding, slope, pieces = (np.empty(len(kernels)) for _ in range(3))
-    lost = size[0] + 8.0 + 0.5 * np.log2(count)
     for i, kernel in enumerate(kernels):
         terms = base * kernel.factor(iz)
-        modulus = np.abs(terms) * largest
-        if kernel.parameter is None:
-            rounding[i] = EPS * float(modulus @ lost)
-        else:
+        relative = lost
+        if kernel.parameter is not None:
             g = gradient[kernel.parameter][0]
-            rounding[i] = EPS * float(modulus @ (lost * np.abs(g) + gradient_size[kernel.parameter][0]))
+            with np.errstate(divide="ignore", invalid="ignore"):
+                relative = lost + np.where(g != 0.0, gradient_size[kernel.parameter][0] / np.abs(g), 0.0)
             terms *= g
-            modulus *= np.abs(g)
+        modulus = np.abs(terms) * largest
+        rounding[i] = EPS * float(modulus @ relative)
         slope[i] = float(modulus @ np.abs(z))
         pieces[i] = discretisation[i] + _tail(modulus)
         psi[i] = terms
     return BentSum(sector[2], k_near, sector[0] < 0.0, iz, psi, log_scale, rounding, slope, pieces)
+
+
+def _steps(bend: _Bend, decades: float) -> tuple[int, float]:
+    """Nodes and step: as fine as the analyticity wants, as far as the decay needs, within ``_MOST_NODES``."""
+    h = 2.0 * np.pi * bend.d / decades
+    stop = bend.stop if np.isfinite(bend.stop) else _LONG
+    if not h > 0.0:  # nothing is known of the contour: its bound will say so
+        return 4, stop / 2.0
+    count = min(max(int(np.ceil(stop / h)) + 2, 4), _MOST_NODES)
+    return count, float(max(h, stop / (count - 2)))
 
 
 def _tail(modulus: Floats) -> float:

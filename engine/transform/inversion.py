@@ -28,9 +28,9 @@ from engine.transform.window import sums_at
 
 __all__ = ["Contour", "Inversion", "invert"]
 
-_CHUNK = 64  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
+_CHUNK = 128  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
 _NOTHING = float(np.exp(NOTHING))
-_MOST_APART = 64  # missed strikes that are then planned one by one
+_MOST_APART = 8  # missed strikes that are then planned one by one
 _TIGHTEST = 2.0**-16  # of the tolerance, for the second plan
 
 
@@ -70,10 +70,10 @@ def invert(
 
 
 def _by_chunks(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], left: int,
+    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int,
     value: Floats, bound: Floats, contours: list[Contour],
 ) -> None:  # fmt: skip
-    count, n = tau.shape[0], strikes.k.shape[0]
+    count, n, left = tau.shape[0], strikes.k.shape[0], limit
     for start in range(0, count, _CHUNK):
         stop = min(start + _CHUNK, count)
         members = np.arange(start, stop)
@@ -81,19 +81,25 @@ def _by_chunks(
         hi = int(strikes.starts[stop]) if stop < count else n
         part = Strikes(strikes.k[lo:hi], strikes.slice_of[lo:hi] - start, strikes.starts[start:stop] - lo)
         sub = model.take(members) if count > _CHUNK else model
-        rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, left)
+        rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, limit, left)
         value[:, lo:hi], bound[:, lo:hi] = _at_strikes(rows, part, kernels)
         contours.extend(_contours(rows))
+        stuck = np.zeros(hi - lo, dtype=np.bool_)
         for apart in (False, True):
-            missed = np.flatnonzero((bound[0, lo:hi] > tolerance * value[0, lo:hi]) & (bound[0, lo:hi] > 1e-290))
+            own = bound[0, lo:hi]
+            missed = np.flatnonzero((own > tolerance * value[0, lo:hi]) & (own > 1e-290) & ~stuck)
             if missed.shape[0] == 0 or (apart and missed.shape[0] > _MOST_APART):
                 break
-            left = _improve(sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, left, apart)
+            before = own[missed].copy()
+            left = _improve(
+                sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, limit, left, apart
+            )
+            stuck[missed] = bound[0, lo + missed] > 0.5 * before  # double precision holds no more
 
 
 def _improve(
     model: Model, tau: Floats, strikes: Strikes, missed: Ints, lo: int, tolerance: float, kernels: list[Kernel],
-    value: Floats, bound: Floats, limit: int, apart: bool,
+    value: Floats, bound: Floats, limit: int, left: int, apart: bool,
 ) -> int:  # fmt: skip
     """Plan the missed strikes, or each of them by itself, for the tolerance that would have been met; keep the
     better."""
@@ -105,7 +111,7 @@ def _improve(
     else:
         members, slice_of = np.unique(strikes.slice_of[missed], return_inverse=True)
     again = Strikes(strikes.k[missed], slice_of, np.searchsorted(slice_of, np.arange(members.shape[0])))
-    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit, rounded=False)
+    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit, left, rounded=False)
     new_value, new_bound = _at_strikes(rows, again, kernels)
     better = new_bound < bound[:, at]
     value[:, at] = np.where(better, new_value, value[:, at])
@@ -114,7 +120,7 @@ def _improve(
 
 
 def _prepared(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int,
+    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int, left: int,
     *, rounded: bool = True,
 ) -> tuple[Rows, int]:  # fmt: skip
     """Rows of a chunk, from the cache where all inputs are the same, and what is left of the node limit."""
@@ -127,12 +133,13 @@ def _prepared(
             sub, sub_tau, sub_reach = model.take(members), tau[members], reach.take(members)
         plan = plan_rows(sub, sub_tau, sub_reach, tolerance=tolerance, power=power)
         wanted = _counted(plan)
-        if wanted > limit:
-            raise RefusedError("slices", f"would need about {wanted} transform nodes", allowed=f"at most {limit}")
+        if wanted > left:
+            need = limit - left + wanted
+            raise RefusedError("slices", f"would need {need} transform nodes or more", allowed=f"at most {limit}")
         return evaluate(sub, sub_tau, plan, kernels)
 
     rows = plan_cache.rows_of(model, tau, reach, (tolerance, tuple(kernels)), fresh)
-    return rows, limit - rows.counted
+    return rows, left - rows.counted
 
 
 def _counted(plan: Plan) -> int:

@@ -15,7 +15,6 @@ import numpy as np
 
 from engine.arrays import Floats, Ints
 from engine.protocols import Model
-from engine.transform.bounds import alias_bounds, truncation_bounds
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
 from engine.transform.record import EPS
@@ -33,7 +32,7 @@ class LineSums:
     log_scale: Floats
     rounding: Floats
     slope: Floats
-    pieces: Floats
+    last: Floats
 
 
 def line_sums(model: Model, tau: Floats, plan: Plan, rows: Ints, kernels: list[Kernel], *, nodes: int) -> LineSums:
@@ -76,6 +75,4 @@ def line_sums(model: Model, tau: Floats, plan: Plan, rows: Ints, kernels: list[K
         rounding[i] = EPS * lost + (WINDOW_ERROR + 4.0 * EPS) * spread
         slope[i] = np.einsum("ij,ij->i", modulus, u)
         np.multiply(base, inverse, out=psi[i])
-    pieces = alias_bounds(model, tau, plan, rows, kernels, log_scale)
-    pieces += truncation_bounds(model, tau, plan.exponent[rows], u[:, -1], kernels, last, log_scale)
-    return LineSums(grid_of(psi), log_scale, rounding, slope, pieces)
+    return LineSums(grid_of(psi), log_scale, rounding, slope, last)

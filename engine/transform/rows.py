@@ -14,6 +14,7 @@ import numpy as np
 
 from engine.arrays import Floats, Ints
 from engine.protocols import Model
+from engine.transform.bounds import alias_bounds, truncation_bounds
 from engine.transform.deformed import BentSum, bent_sums
 from engine.transform.kernels import Kernel
 from engine.transform.lines import line_sums
@@ -71,15 +72,23 @@ def evaluate(model: Model, tau: Floats, plan: Plan, kernels: list[Kernel]) -> Ro
     offset = np.concatenate([[0], np.cumsum(room)])
     grid = np.empty((kinds, int(offset[-1])))
     log_scale = np.zeros(count)
-    rounding, slope, pieces = (np.zeros((kinds, count)) for _ in range(3))
+    rounding, slope, pieces, last = (np.zeros((kinds, count)) for _ in range(4))
     for rows in blocks:
         found = line_sums(
             model.take(plan.slice_of[rows]), tau[plan.slice_of[rows]], plan, rows, kernels, nodes=int(nodes[rows[0]])
         )
         log_scale[rows], rounding[:, rows], slope[:, rows] = found.log_scale, found.rounding, found.slope
-        pieces[:, rows] = found.pieces
+        last[:, rows] = found.last
         for i, r in enumerate(rows):
             grid[:, offset[r] : offset[r] + room[r]] = found.grid[:, i]
+    straight = np.flatnonzero(nodes > 0)
+    if straight.shape[0]:
+        owner = plan.slice_of[straight]
+        sub, sub_tau, scale = model.take(owner), tau[owner], log_scale[straight]
+        end = 2.0 * np.pi / plan.period[straight] * (nodes[straight] - 1)
+        pieces[:, straight] = alias_bounds(sub, sub_tau, plan, straight, kernels, scale) + truncation_bounds(
+            sub, sub_tau, plan.exponent[straight], end, kernels, last[:, straight], scale
+        )
     for r, parts in bent.items():
         nodes[r] = sum(part.iz.shape[0] for part in parts)
     slices = plan.base.shape[0] // 2
