@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from engine.black import ImpliedVols, implied_vols
+from engine.calibration import CalibratedSlice, Calibration, CalibrationSettings, CalibrationSlice, Prior, calibrate
 from engine.errors import EngineError, InputError, RefusedError
 from engine.greeks import GREEKS, GreekSlice, price_greeks
 from engine.market.chain import ChainExpiry, QuoteFlag, flag_words
@@ -25,6 +26,10 @@ __all__ = [
     "GREEKS",
     "MODELS",
     "TOLERANCE_RANGE",
+    "CalibratedSlice",
+    "Calibration",
+    "CalibrationSettings",
+    "CalibrationSlice",
     "ChainExpiry",
     "EngineError",
     "GreekSlice",
@@ -34,6 +39,7 @@ __all__ = [
     "ParameterSpec",
     "Payoff",
     "PricedSlice",
+    "Prior",
     "QuoteFlag",
     "QuotedVols",
     "RefusedError",
@@ -44,6 +50,7 @@ __all__ = [
     "SurfaceTotals",
     "TransformReport",
     "build_surface",
+    "calibrate",
     "flag_words",
     "implied_vols",
     "price_greeks",

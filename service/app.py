@@ -13,9 +13,12 @@ from starlette.responses import Response
 from engine import EngineError
 from service import CONTRACT_VERSION
 from service.array_route import ArrayOperation, add_array_route
+from service.calibrations.routes import OPERATIONS as CALIBRATIONS
+from service.calibrations.routes import add_calibration_routes
 from service.chains.routes import OPERATION as CHAINS
 from service.compute import Compute
 from service.implied_vols.routes import OPERATION as IMPLIED_VOLS
+from service.jobs.desk import Desk
 from service.models.routes import add_models_route
 from service.openapi import document
 from service.operations.readiness import Readiness
@@ -36,11 +39,13 @@ def create_app(settings: Settings) -> FastAPI:
     compute = Compute(settings)
     metrics = Metrics(compute)
     readiness = Readiness(settings, compute)
+    desk = Desk(settings, compute)
 
     @asynccontextmanager
     async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
         async with readiness.while_serving():
             yield
+        await desk.close()
         compute.close()
 
     app = FastAPI(
@@ -61,11 +66,12 @@ def create_app(settings: Settings) -> FastAPI:
     # 3. Routes, the busiest first.
     for operation in ARRAY_OPERATIONS:
         add_array_route(app.router, operation, settings=settings, compute=compute)
+    add_calibration_routes(app.router, desk)
     add_models_route(app.router)
     add_operations_routes(app.router, metrics=metrics, readiness=readiness)
     add_pages(app.router, openapi=lambda: app.openapi(), example=SMILES.example)
     # 4. The OpenAPI document, made when it is first asked for.
-    app.openapi = lambda: document(app, ARRAY_OPERATIONS)  # type: ignore[method-assign]
+    app.openapi = lambda: document(app, [*ARRAY_OPERATIONS, CALIBRATIONS])  # type: ignore[method-assign]
     return app
 
 

@@ -1,4 +1,4 @@
-"""The command ``smilewright``: serve, demo, check.
+"""The command ``smilewright``: serve, worker, demo, check.
 
 Exit codes: 0 done, 1 the work failed, 2 wrong arguments. Errors go to standard error, one sentence each. Threads of
 linear-algebra libraries are pinned to one each before numpy is loaded, so the service is imported inside functions.
@@ -10,6 +10,7 @@ import argparse
 import os
 import signal
 import sys
+import time
 from collections.abc import Sequence
 from typing import Final, NoReturn
 
@@ -59,7 +60,16 @@ def _parser() -> argparse.ArgumentParser:
     serve.add_argument("--host", help="address to listen on, loopback only (default 127.0.0.1)")
     serve.add_argument("--port", type=int, help="port to listen on, 0 for a free one (default 8000)")
     serve.add_argument("--workers", type=int, help="processes that serve (default 1)")
+    serve.add_argument("--job-workers", type=int, help="processes that work on jobs (default one per core)")
     serve.set_defaults(run=_serve)
+    worker = commands.add_parser(
+        "worker",
+        help="work on jobs beside a shared store",
+        description="Run processes that work on jobs until interrupted. They share the store (SMILEWRIGHT_JOB_STORE) "
+        "and the data folder (SMILEWRIGHT_DATA_DIR) with the service.",
+    )
+    worker.add_argument("--job-workers", type=int, help="processes that work on jobs (default one per core)")
+    worker.set_defaults(run=_worker)
     demo = commands.add_parser(
         "demo",
         help="see the whole job over real HTTP",
@@ -82,17 +92,17 @@ def _without_command(chosen: argparse.Namespace) -> int:
     if chosen.version:
         print(f"smilewright {version()}")
         return _DONE
-    return _say("smilewright: a command is needed: serve, demo or check (see smilewright --help)", _WRONG_ARGUMENTS)
+    return _say(
+        "smilewright: a command is needed: serve, worker, demo or check (see smilewright --help)", _WRONG_ARGUMENTS
+    )
 
 
 def _serve(chosen: argparse.Namespace) -> int:
     from service.server import ListenError, is_loopback, listen, serve
     from service.settings import PREFIX, Settings, SettingsError
 
-    given = {name: getattr(chosen, name) for name in ("host", "port", "workers")}
-    options = {PREFIX + name.upper(): str(value) for name, value in given.items() if value is not None}
     try:
-        settings = Settings.from_environment({**os.environ, **options})
+        settings = Settings.from_environment(_environment(chosen, PREFIX, "host", "port", "workers", "job_workers"))
     except SettingsError as error:
         return _say(f"smilewright serve: {error}", _WRONG_ARGUMENTS)
     if not is_loopback(settings.host):
@@ -114,6 +124,29 @@ def _serve(chosen: argparse.Namespace) -> int:
     signal.signal(signal.SIGTERM, lambda *_: sys.exit(_DONE))  # raised again by the server once it has stopped
     serve(settings, bound)
     return _DONE
+
+
+def _environment(chosen: argparse.Namespace, prefix: str, *names: str) -> dict[str, str]:
+    """The environment with the options that were given in the place of its entries."""
+    given = {name: getattr(chosen, name) for name in names}
+    return {**os.environ, **{prefix + name.upper(): str(value) for name, value in given.items() if value is not None}}
+
+
+def _worker(chosen: argparse.Namespace) -> int:
+    from service.jobs.database import where
+    from service.jobs.pool import running_workers
+    from service.settings import PREFIX, Settings, SettingsError
+
+    try:
+        settings = Settings.from_environment(_environment(chosen, PREFIX, "job_workers"))
+    except SettingsError as error:
+        return _say(f"smilewright worker: {error}", _WRONG_ARGUMENTS)
+    count = max(1, settings.job_workers)
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(_DONE))
+    with running_workers(settings, count):
+        print(f"{count} workers take jobs from {where(settings)}. Ctrl-C stops them.", flush=True)
+        while True:
+            time.sleep(3_600.0)
 
 
 def _demo(_chosen: argparse.Namespace) -> int:

@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Any, Final
+from typing import Any, Final, Protocol
 
 from fastapi import FastAPI
 from fastapi.openapi.utils import get_openapi
 from pydantic.json_schema import models_json_schema
 
-from service.array_route import ArrayOperation
 from service.documentation import TAGS, ProblemAnswer
+from service.fields import Asked
 
 __all__ = ["document"]
 
@@ -30,14 +30,21 @@ your firm's own model-risk policy before a number from here is used for trading,
 """
 
 
-def document(app: FastAPI, operations: Sequence[ArrayOperation[Any]]) -> dict[str, Any]:
+class _HasRequest(Protocol):
+    """An operation whose request model is not known to the framework."""
+
+    @property
+    def request(self) -> type[Asked]: ...
+
+
+def document(app: FastAPI, operations: Sequence[_HasRequest]) -> dict[str, Any]:
     """The document, made once an app."""
     if app.openapi_schema is None:
         app.openapi_schema = _document(app, operations)
     return app.openapi_schema
 
 
-def _document(app: FastAPI, operations: Sequence[ArrayOperation[Any]]) -> dict[str, Any]:
+def _document(app: FastAPI, operations: Sequence[_HasRequest]) -> dict[str, Any]:
     made = get_openapi(
         title=app.title,
         version=app.version,

@@ -11,6 +11,7 @@ import uvicorn
 from fastapi import FastAPI
 
 from service.app import create_app
+from service.jobs.pool import running_workers
 from service.logs import log_config
 from service.settings import Settings
 
@@ -62,11 +63,13 @@ def server_options(settings: Settings) -> dict[str, Any]:
 
 
 def serve(settings: Settings, bound: socket.socket) -> None:
-    """Serve on a socket until told to stop; with several ``workers`` the server's own supervisor binds it again."""
+    """Serve on a socket, with workers for jobs beside it, until told to stop; with several ``workers`` the server's own
+    supervisor binds it again."""
     options = server_options(settings)
-    if settings.workers == 1:
-        uvicorn.Server(uvicorn.Config(create_app(settings), **options)).run(sockets=[bound])
-        return
-    host, port = bound.getsockname()[:2]
-    bound.close()
-    uvicorn.run(_FACTORY, factory=True, host=host, port=port, workers=settings.workers, **options)
+    with running_workers(settings, settings.job_workers):
+        if settings.workers == 1:
+            uvicorn.Server(uvicorn.Config(create_app(settings), **options)).run(sockets=[bound])
+            return
+        host, port = bound.getsockname()[:2]
+        bound.close()
+        uvicorn.run(_FACTORY, factory=True, host=host, port=port, workers=settings.workers, **options)

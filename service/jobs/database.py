@@ -14,7 +14,7 @@ from service.settings import Settings
 if TYPE_CHECKING:
     from sqlalchemy import Connection, Engine
 
-__all__ = ["IMPATIENT", "PATIENT", "BeatBook", "address", "job_folder", "open_engine"]
+__all__ = ["IMPATIENT", "PATIENT", "BeatBook", "address", "job_folder", "open_engine", "where"]
 
 IMPATIENT: Final = 0.25
 PATIENT: Final = 30.0
@@ -37,13 +37,21 @@ def address(settings: Settings) -> str:
     return f"postgresql+psycopg://{rest}" if scheme in ("postgresql", "postgres") else given
 
 
+def where(settings: Settings) -> str:
+    """The store in words, without user and password."""
+    import sqlalchemy as sa
+
+    given = sa.make_url(address(settings))
+    return given.database or "" if given.drivername == "sqlite" else f"{given.host or 'this host'}/{given.database}"
+
+
 def open_engine(settings: Settings, *, patience: float) -> Engine:
     """An engine that connects when it is first used. ``patience`` in seconds, for a lock of SQLite; below one second it
     also bounds connections and statements of PostgreSQL."""
     import sqlalchemy as sa
 
-    where = address(settings)
-    if not where.startswith(_SQLITE):
+    url = address(settings)
+    if not url.startswith(_SQLITE):
         options: dict[str, Any] = {"application_name": "smilewright"}
         if patience < 1.0:
             options |= {
@@ -51,10 +59,10 @@ def open_engine(settings: Settings, *, patience: float) -> Engine:
                 "options": f"-c statement_timeout={_STATEMENT_MILLISECONDS}",
             }
         return sa.create_engine(
-            where, connect_args=options, pool_pre_ping=True, pool_size=5, pool_timeout=_CONNECT_SECONDS
+            url, connect_args=options, pool_pre_ping=True, pool_size=5, pool_timeout=_CONNECT_SECONDS
         )
     Path(settings.data_dir).mkdir(parents=True, exist_ok=True)
-    engine = sa.create_engine(where, connect_args={"timeout": patience}, pool_size=5, pool_timeout=PATIENT)
+    engine = sa.create_engine(url, connect_args={"timeout": patience}, pool_size=5, pool_timeout=PATIENT)
 
     @sa.event.listens_for(engine, "connect")
     def _prepare(connection: Any, _record: Any) -> None:

@@ -10,7 +10,7 @@ from typing import Final, get_args
 
 from starlette.datastructures import Headers, QueryParams
 
-from service.jobs.store import Job, State
+from service.jobs.store import Job, Place, State
 from service.problems import Problem
 
 __all__ = ["ANONYMOUS", "Listing", "cursor_of", "idempotency_key", "listing", "owner_of", "wait_seconds"]
@@ -18,7 +18,7 @@ __all__ = ["ANONYMOUS", "Listing", "cursor_of", "idempotency_key", "listing", "o
 ANONYMOUS: Final = "anonymous"
 _KEY: Final = re.compile(r"[\x21-\x7e]([\x20-\x7e]{0,253}[\x21-\x7e])?")
 _WAIT: Final = re.compile(r"(?:^|[,;\s])wait\s*=\s*\"?(\d{1,9})\"?(?=$|[,;\s])", re.IGNORECASE)
-_CURSOR: Final = re.compile(r"(\d{1,15}):([0-9a-f]{32})")
+_CURSOR: Final = re.compile(r"(\d{1,15}):(\d{1,15}):([0-9a-f]{32})")
 _MOST: Final = 200
 _USUAL: Final = 50
 
@@ -46,11 +46,11 @@ def wait_seconds(headers: Headers, most: int) -> int:
 
 @dataclass(frozen=True, slots=True)
 class Listing:
-    """Which jobs to list. ``before``: milliseconds and id of the last one seen."""
+    """Which jobs to list. ``before``: the place of the last one seen."""
 
     state: State | None
     limit: int
-    before: tuple[int, str] | None
+    before: Place | None
 
 
 def listing(query: QueryParams) -> Listing:
@@ -69,10 +69,10 @@ def listing(query: QueryParams) -> Listing:
 
 def cursor_of(job: Job) -> str:
     """The cursor that goes on after a job."""
-    return base64.urlsafe_b64encode(f"{round(1e3 * job.created)}:{job.id}".encode()).decode().rstrip("=")
+    return base64.urlsafe_b64encode(":".join(map(str, job.place)).encode()).decode().rstrip("=")
 
 
-def _place(cursor: str | None) -> tuple[int, str] | None:
+def _place(cursor: str | None) -> Place | None:
     if cursor is None:
         return None
     try:
@@ -82,4 +82,4 @@ def _place(cursor: str | None) -> tuple[int, str] | None:
     found = _CURSOR.fullmatch(text)
     if found is None:
         raise Problem("invalid-query", "cursor must be the next_cursor of an earlier page.")
-    return int(found[1]), found[2]
+    return int(found[1]), int(found[2]), found[3]

@@ -27,8 +27,9 @@ from service.settings import Settings
 if TYPE_CHECKING:
     from dbos import DBOSClient, WorkflowStatus
 
-__all__ = ["APPLICATION", "JOBS", "JOB_WORKFLOW", "Job", "JobStore", "State", "StoreDown", "Submitted"]
+__all__ = ["APPLICATION", "JOBS", "JOB_WORKFLOW", "Job", "JobStore", "Place", "State", "StoreDown", "Submitted"]
 
+Place = tuple[int, int, str]
 State = Literal["queued", "running", "succeeded", "failed", "cancelled"]
 APPLICATION: Final = "smilewright"
 JOBS: Final = "jobs"
@@ -52,7 +53,8 @@ class StoreDown(Exception):
 
 @dataclass(frozen=True, slots=True)
 class Job:
-    """A job as the store and its files have it. Times are seconds since 1970; ``digest`` is that of the body."""
+    """A job as the store and its files have it. Times are seconds since 1970; ``digest`` is that of the body; ``place``
+    orders jobs as the store does, which counts in seconds on SQLite, and by time and id within those."""
 
     id: str
     kind: str
@@ -65,6 +67,7 @@ class Job:
     started: float | None
     finished: float | None
     problem: dict[str, Any] | None
+    place: Place
 
     @property
     def over(self) -> bool:
@@ -112,7 +115,7 @@ class JobStore:
             "workflow_id_reuse_policy": "reject",
             "authenticated_user": owner,
             "serialization_type": "portable",
-            "attributes": {"kind": kind, "digest": digest, "total": total},
+            "attributes": {"kind": kind, "digest": digest, "total": total, "at": round(1e3 * time.time())},
             "application_name": APPLICATION,
         }
         if delay > 0.0:
@@ -135,23 +138,21 @@ class JobStore:
         found = [self._job(row) for row in rows if row.authenticated_user == owner]
         return found[0] if found and found[0].kind == kind else None
 
-    def page(
-        self, kind: str, *, owner: str, state: State | None, limit: int, before: tuple[int, str] | None
-    ) -> Sequence[Job]:
-        """Jobs of this owner, the latest first, after the one that ``before`` names by milliseconds and id."""
+    def page(self, kind: str, *, owner: str, state: State | None, limit: int, before: Place | None) -> Sequence[Job]:
+        """Jobs of this owner, the latest first, after the one that is at ``before``."""
         found: list[Job] = []
         status = list(_ROWS[state]) if state else None
         with self._guarded() as client:
             for row in self._rows(client, owner, status):
-                place = (row.created_at or 0, row.workflow_id)
-                if len(found) >= limit and place[0] < round(1e3 * found[-1].created):
-                    break  # read on through those made in the same millisecond: their order is that of their ids
-                if (row.attributes or {}).get("kind") != kind or (before is not None and place >= before):
+                if len(found) >= limit and (row.created_at or 0) < found[-1].place[0]:
+                    break  # read on through those that the store takes to be made at the same time
+                about = row.attributes or {}
+                if about.get("kind") != kind or (before is not None and _place(row) >= before):
                     continue
                 job = self._job(row)
                 if state is None or job.state == state:
                     found.append(job)
-        found.sort(key=lambda one: (one.created, one.id), reverse=True)
+        found.sort(key=lambda one: one.place, reverse=True)
         return found[:limit]
 
     @staticmethod
@@ -213,10 +214,11 @@ class JobStore:
             total=total,
             done=total if whole else min(self.blobs.pieces_done(row.workflow_id), total),
             state=state,
-            created=(row.created_at or 0) / 1e3,
+            created=int(about["at"]) / 1e3,
             started=begun,
             finished=finished,
             problem=problem,
+            place=_place(row),
         )
 
     @contextlib.contextmanager
@@ -261,6 +263,10 @@ LOST: Final[dict[str, Any]] = {
 def end_job(blobs: Blobs, job: str, state: State, problem: dict[str, Any] | None = None) -> bool:
     """Write the outcome of a job; whether it was this call that did."""
     return blobs.put(job, "outcome.json", orjson.dumps({"state": state, "at": time.time(), "problem": problem}))
+
+
+def _place(row: WorkflowStatus) -> Place:
+    return row.created_at or 0, int((row.attributes or {})["at"]), row.workflow_id
 
 
 def _id(kind: str, owner: str, key: str | None) -> str:

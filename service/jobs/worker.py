@@ -105,40 +105,7 @@ class _Worker:
                 "log_level": "CRITICAL",  # it logs a cancelled workflow as an error; what matters we log
             }
         )
-        runner = self._runner
-
-        @DBOS.step(name="compute")
-        def compute(kind: str, job: str, digest: str, first: int, last: int) -> bool:
-            try:
-                runner.compute(kind, job, digest, first, last)
-            except JobStopped:
-                return False
-            return True
-
-        @DBOS.workflow(name=STEP_WORKFLOW)
-        def run_step(kind: str, job: str, digest: str, first: int, last: int) -> bool:
-            return compute(kind, job, digest, first, last)
-
-        @DBOS.workflow(name=JOB_WORKFLOW)
-        def run_job(kind: str, job: str, digest: str) -> None:
-            try:
-                if runner.over(job):
-                    return
-                steps = runner.chunks(kind, job, digest)
-                if len(steps) == 1:
-                    sound = compute(kind, job, digest, *steps[0])
-                else:
-                    others = [DBOS.enqueue_workflow(STEPS, run_step, kind, job, digest, *step) for step in steps]
-                    sound = all(other.get_result(polling_interval_sec=_WAIT_SECONDS) for other in others)
-                if sound:
-                    runner.finish(kind, job, digest)
-            except JobStopped:
-                return
-            except Exception as error:
-                if not runner.over(job):
-                    LOGGER.error("job failed", exc_info=error, extra={"fields": {"job": job}})
-                    runner.fail(job)
-
+        _register(self._runner)
         DBOS.listen_queues([JOBS, STEPS])
         DBOS.launch()
         for queue, at_once in ((JOBS, _AT_ONCE), (STEPS, 2)):  # one step computes, the next is at hand
@@ -213,3 +180,40 @@ class _Worker:
     def _watch_supervisor(self) -> None:
         sys.stdin.buffer.read()
         self._orphan.set()
+
+
+def _register(runner: Runner) -> None:
+    """Make the workflows known to the durable engine, under names that do not change with the code."""
+    from dbos import DBOS
+
+    @DBOS.step(name="compute")
+    def compute(kind: str, job: str, digest: str, first: int, last: int) -> bool:
+        try:
+            runner.compute(kind, job, digest, first, last)
+        except JobStopped:
+            return False
+        return True
+
+    @DBOS.workflow(name=STEP_WORKFLOW)
+    def run_step(kind: str, job: str, digest: str, first: int, last: int) -> bool:
+        return compute(kind, job, digest, first, last)
+
+    @DBOS.workflow(name=JOB_WORKFLOW)
+    def run_job(kind: str, job: str, digest: str) -> None:
+        try:
+            if runner.over(job):
+                return
+            steps = runner.chunks(kind, job, digest)
+            if len(steps) == 1:
+                sound = compute(kind, job, digest, *steps[0])
+            else:
+                others = [DBOS.enqueue_workflow(STEPS, run_step, kind, job, digest, *step) for step in steps]
+                sound = all(other.get_result(polling_interval_sec=_WAIT_SECONDS) for other in others)
+            if sound:
+                runner.finish(kind, job, digest)
+        except JobStopped:
+            return
+        except Exception as error:
+            if not runner.over(job):
+                LOGGER.error("job failed", exc_info=error, extra={"fields": {"job": job}})
+                runner.fail(job)

@@ -28,6 +28,18 @@ __all__ = ["JobOperations", "add_job_routes", "job_parameter"]
 
 Request_ = TypeVar("Request_", bound=Asked)
 _SMALL_BODY: Final = 32 * 1024
+_SUBMIT_REFUSALS: Final = (
+    "not-json",
+    "invalid-header",
+    "not-acceptable",
+    "body-too-large",
+    "unsupported-media-type",
+    "invalid-request",
+    "limit-exceeded",
+    "idempotency-key-reused",
+    "overloaded",
+    "jobs-unavailable",
+)
 _COMMON: Final = ("no-such-job", "not-acceptable", "jobs-unavailable")
 
 
@@ -103,18 +115,7 @@ def _add_submit(router: APIRouter, operations: JobOperations[Request_], desk: De
         responses={
             200: {"model": operations.answer, "headers": location},
             202: accepted,
-            **refusals(
-                "not-json",
-                "invalid-header",
-                "not-acceptable",
-                "body-too-large",
-                "unsupported-media-type",
-                "invalid-request",
-                "limit-exceeded",
-                "idempotency-key-reused",
-                "overloaded",
-                "jobs-unavailable",
-            ),
+            **refusals(*_SUBMIT_REFUSALS),
         },
         route_class_override=DirectRoute,
         openapi_extra={
