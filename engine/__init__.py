@@ -3,6 +3,14 @@
 from __future__ import annotations
 
 from engine.black import ImpliedVols, implied_vols
+from engine.calibration import (
+    CalibratedSlice,
+    Calibration,
+    CalibrationSettings,
+    CalibrationSlice,
+    Prior,
+    calibrate,
+)
 from engine.calibration import CalibratedSlice, Calibration, CalibrationSettings, CalibrationSlice, Prior, calibrate
 from engine.errors import EngineError, InputError, RefusedError
 from engine.greeks import GREEKS, GreekSlice, price_greeks
