@@ -49,6 +49,7 @@ _ROOM: dict[str, tuple[float, float]] = {
 }
 _DRIFT_ROOM = (-3.0, 3.0)  # the drift of Variance Gamma is called theta, but may have either sign
 _LOGARITHMIC = ("v0", "kappa", "theta", "sigma", "volatility", "nu", "jump_stdev")
+_ROUND = 4.0 * float(np.finfo(np.float64).eps)  # by which the Feller condition is kept in spite of rounding
 _LEAST_RATIO = 1e-9  # of upper to lower end: narrower is fixed
 
 
@@ -128,12 +129,12 @@ class Coordinates:
         kappa, theta, sigma = out[one.kappa], out[one.theta], out[one.sigma]
         by_others = np.zeros(len(self.free))
         if one.dependent == "sigma":
-            cap = np.sqrt(2.0 * kappa * theta)
+            cap = np.sqrt(2.0 * kappa * theta) * (1.0 - _ROUND)
             if cap < high:
                 high = cap
                 by_others = share * 0.5 * cap * (slope[one.kappa] / kappa + slope[one.theta] / theta)
         else:
-            floor = 0.5 * sigma * sigma / kappa
+            floor = 0.5 * sigma * sigma / kappa * (1.0 + _ROUND)
             if floor > low:
                 low = floor
                 by_others = -(1.0 - share) * floor * slope[one.kappa] / kappa
@@ -248,7 +249,7 @@ def _feller_of(names: tuple[str, ...], fixed: Floats, ends: dict[str, tuple[floa
         elif np.isnan(fixed[theta]):
             out.append(_Feller("theta", kappa, theta, sigma))
         else:
-            least = 0.5 * fixed[sigma] ** 2 / fixed[theta] if fixed[theta] > 0.0 else np.inf
+            least = 0.5 * fixed[sigma] ** 2 / fixed[theta] * (1.0 + _ROUND) if fixed[theta] > 0.0 else np.inf
             low, high = ends[prefix + "kappa"]
             most = high if np.isnan(fixed[kappa]) else fixed[kappa]
             if least > most:

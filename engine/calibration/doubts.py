@@ -52,7 +52,7 @@ def warnings_of(doubts: Doubts, settings: CalibrationSettings) -> list[str]:
     """Sentences, gravest first."""
     out = []
     if doubts.status == "stopped":
-        out.append(f"the fit did not converge within {settings.max_evaluations} surface evaluations a start")
+        out.append(f"the fit did not converge within {settings.max_evaluations} surface evaluations a descent")
     out += [_bound(name, doubts, settings) for name in doubts.held]
     out += _feller(doubts, settings)
     out += _identification(doubts, settings)

@@ -7,7 +7,8 @@ in three stages:
 2. with a robust loss, its scale from the residuals of the linear fit (1.345 normal-consistent median absolute
    deviations: Huber 1981, from memory), and the approach again;
 3. *settle* at the final pricing tolerance. A coordinate that has come to one of its ends and is pushed outward is put
-   on the end exactly and held; it is let go again should the slope there point inward once the others have settled.
+   on the end exactly and held; it is let go again, for good, should the slope there point inward once the others have
+   settled.
 
 The answer of a fit that ends with held coordinates is ``at_bound``, not ``converged``.
 """
@@ -34,8 +35,9 @@ from engine.errors import RefusedError
 
 __all__ = ["calibrate"]
 
-_NEAR = 1e-3  # of the way between the ends: near enough to be tried on the end itself
+_NEAR = 1e-2  # of the way between the ends: near enough to be tried on the end itself
 _ROUNDS = 6  # of holding and letting go
+_LEVEL = 1e-7  # of the cost, across the whole room of a coordinate
 _TRIED = 2  # of the starts of models with jumps, those that begin nearest
 _PERFECT = 1e-20  # cost (1e-12 in volatility) at which further starts cannot matter
 _APPROACH = {"ftol": 1e-5, "xtol": 1e-5, "gtol": 1e-10}
@@ -155,27 +157,29 @@ def _settled(objective: Objective, best: _Run, settings: CalibrationSettings) ->
         best = _descend(objective, best.x, loss, settings, _APPROACH)
         iterations += best.iterations
     objective.tighten()
-    held = np.zeros(best.x.shape, dtype=bool)
+    held, released = np.zeros(best.x.shape, dtype=bool), np.zeros(best.x.shape, dtype=bool)
     run = best
     for _ in range(_ROUNDS):
-        x, held = _on_ends(objective, run.x, held, loss)
+        x, held = _on_ends(objective, run.x, held, released, loss)
         run = _descend(objective, x, loss, settings, _SETTLE, held)
         iterations += run.iterations
         wrong = held & ~_pushed_out(objective, run.x, loss)
-        arrived = ~held & _near_ends(objective.coordinates, run.x) & _pushed_out(objective, run.x, loss)
+        arrived = _arrived(objective, run.x, held | released, loss)
         if run.stopped or not (wrong.any() or arrived.any()):
             break
         if wrong.any():
-            held &= ~wrong
+            held, released = held & ~wrong, released | wrong
             margin = 2.0 * _NEAR * (objective.coordinates.upper - objective.coordinates.lower)
             inside = np.clip(run.x, objective.coordinates.lower + margin, objective.coordinates.upper - margin)
             run = replace(run, x=np.where(wrong, inside, run.x))
     return Fitted(objective.at(run.x), held, loss, iterations, best.stopped or run.stopped)
 
 
-def _on_ends(objective: Objective, x: Floats, held: np.ndarray, loss: Loss) -> tuple[Floats, np.ndarray]:
-    """Put the coordinates that are near an end and pushed outward on it, if the surface can be valued there."""
-    arrived = ~held & _near_ends(objective.coordinates, x) & _pushed_out(objective, x, loss)
+def _on_ends(
+    objective: Objective, x: Floats, held: np.ndarray, released: np.ndarray, loss: Loss
+) -> tuple[Floats, np.ndarray]:
+    """Put the coordinates that have arrived on their ends, if the surface can be valued there."""
+    arrived = _arrived(objective, x, held | released, loss)
     if not arrived.any():
         return x, held
     lower, upper = objective.coordinates.lower, objective.coordinates.upper
@@ -183,14 +187,17 @@ def _on_ends(objective: Objective, x: Floats, held: np.ndarray, loss: Loss) -> t
     return (on, held | arrived) if objective.at(on).valued else (x, held)
 
 
-def _near_ends(coordinates: Coordinates, x: Floats) -> np.ndarray:
-    width = coordinates.upper - coordinates.lower
-    return np.asarray(np.minimum(x - coordinates.lower, coordinates.upper - x) < _NEAR * width)
+def _arrived(objective: Objective, x: Floats, apart: np.ndarray, loss: Loss) -> np.ndarray:
+    """Coordinates near an end and pushed outward, those ``apart`` left out."""
+    lower, upper = objective.coordinates.lower, objective.coordinates.upper
+    near = np.minimum(x - lower, upper - x) < _NEAR * (upper - lower)
+    return np.asarray(near & ~apart & _pushed_out(objective, x, loss))
 
 
 def _pushed_out(objective: Objective, x: Floats, loss: Loss) -> np.ndarray:
-    """Whether the cost falls toward the nearer end."""
+    """Whether the cost falls toward the nearer end, or is all but level there."""
+    lower, upper = objective.coordinates.lower, objective.coordinates.upper
     found = objective.at(x)
     gradient = found.jacobian.T @ loss.influence(found.residuals)
-    lower = x - objective.coordinates.lower < objective.coordinates.upper - x
-    return np.asarray(np.where(lower, gradient > 0.0, gradient < 0.0))
+    outward = np.where(x - lower < upper - x, gradient, -gradient)
+    return np.asarray(outward * (upper - lower) >= -_LEVEL * loss.cost(found.residuals))

@@ -18,6 +18,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -73,7 +74,7 @@ def coerced(slices: Sequence[CalibrationSlice]) -> list[CalibrationSlice]:
     out = []
     for i, one in enumerate(slices):
         n = np.size(one.strikes)
-        columns = {}
+        columns: dict[str, Any] = {}
         for name in ("strikes", "vols", "bid_vols", "ask_vols"):
             found = getattr(one, name)
             if found is None and name != "vols":
