@@ -39,8 +39,13 @@ class Case:
         self.low, self.high = (float(np.reshape(edge, -1)[0]) for edge in self.model.strip(self.tau))
 
     def orders(self, count: int) -> np.ndarray:
-        """Moment orders in the strip: in [0, 1], and to either side up to 95 % of the way to the edge or 30 / s."""
+        """Moment orders in the strip: in [0, 1], and to either side as far as 95 % of the way to the edge, 30 / s, and
+        moments of exp(300) allow."""
         right, left = (min(30.0 / self.s, 0.95 * room) for room in (self.high - 1.0, -self.low))
+        while not float(np.ravel(self.model.log_moment(np.array([1.0 + right]), self.tau))[0]) < 300.0:
+            right *= 0.7
+        while not float(np.ravel(self.model.log_moment(np.array([-left]), self.tau))[0]) < 300.0:
+            left *= 0.7
         outward = np.geomspace(1e-2, 1.0, count)
         return np.concatenate([-left * outward, np.linspace(0.05, 0.95, count), 1.0 + right * outward])
 
@@ -103,7 +108,10 @@ def test_strip_is_inside_the_true_one(name: str, seed: int) -> None:
     for found, beyond in ((case.low, 0.0), (case.high, 1.0)):
         if math.isfinite(found):
             inside = beyond + (found - beyond) * np.array([0.5, 0.9, 0.999, 1.0 - 1e-6])
-            assert np.all(np.isfinite(case.model.log_moment(inside, case.tau)))
+            for p, moment in zip(inside, case.model.log_moment(inside, case.tau), strict=True):
+                assert moment >= -1e-9  # not NaN either
+                if math.isinf(moment):  # lognormal jumps: the logarithm of the moment is itself beyond the doubles
+                    assert log_moments(case.twin, case.tau, float(p), [0.0])[0].real > gmpy2.mpfr("1e308")
 
 
 @each_case
@@ -129,7 +137,8 @@ def test_logarithm_within_its_stated_rounding(name: str, seed: int) -> None:
         for i, true in enumerate(exact):
             error = float(abs(gmpy2.mpc(complex(value[i])) - true))
             assert error <= EPS * size[i], (case.model, case.tau, z[i], error, EPS * size[i])
-            assert EPS * size[i] <= 1e-9 * (1.0 + abs(complex(true))), (case.model, case.tau, z[i], EPS * size[i])
+            if 0.0 < p < 1.0:  # next to an edge of the strip digits are lost, and the cap has to say so
+                assert EPS * size[i] <= 1e-9 * (1.0 + abs(complex(true))), (case.model, case.tau, z[i], EPS * size[i])
 
 
 # Sets whose upper (or, by symmetry, lower) critical moment lies so near to 1 (to 0) that double precision can hardly
@@ -162,7 +171,7 @@ _TO_BLACK: dict[str, Callable[[float], dict[str, Any]]] = {
     "heston": lambda e: {"v0": 0.04, "kappa": 1.5, "theta": 0.09, "sigma": e, "rho": -0.7},
     "bates": lambda e: {**_TO_BLACK["heston"](e), "jump_intensity": e, "jump_mean": -0.1, "jump_stdev": 0.2},
     "merton": lambda e: {"volatility": 0.3, "jump_intensity": e, "jump_mean": -0.1, "jump_stdev": 0.2},
-    "variance_gamma": lambda e: {"sigma": 0.3, "theta": -0.1, "nu": e},
+    "variance_gamma": lambda e: {"sigma": 0.3, "theta": -0.1, "nu": 1e-3 * e},
     "double_heston": lambda e: {
         "factors": [
             {"v0": 0.04, "kappa": 1.5, "theta": 0.09, "sigma": e, "rho": -0.7},
@@ -220,9 +229,10 @@ def test_stacked_columns_are_the_models_one_by_one(name: str) -> None:
     z = np.array([0.3, 4.0, 50.0]) - 0.4j
     for i, model in enumerate(cases):
         t = float(tau[i, 0])
-        assert np.array_equal(stacked.log_cf(z, tau)[i], model.log_cf(z, t))
+        value, size = model.log_cf_sized(z, t)
+        assert np.all(np.abs(stacked.log_cf(z, tau)[i] - value) <= EPS * size)
         assert np.array_equal(np.reshape(stacked.mean_variance(tau), -1)[i], np.reshape(model.mean_variance(t), -1)[0])
         for ours, theirs in zip(stacked.strip(tau), model.strip(t), strict=True):
             assert np.reshape(ours, -1)[i] == pytest.approx(float(np.reshape(theirs, -1)[0]), rel=1e-12)
         again = stacked.take(np.array([i]))
-        assert np.array_equal(again.log_cf(z, tau[[i]])[0], model.log_cf(z, t))
+        assert np.all(np.abs(again.log_cf(z, tau[[i]])[0] - value) <= EPS * size)
