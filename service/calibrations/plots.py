@@ -6,9 +6,9 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
-from service.calibrations.axes import Axis, Frame, figure, line, words
+from service.calibrations.axes import Axis, Frame, figure, line, ticks, words
 
-__all__ = ["expiry_plot", "term_plot"]
+__all__ = ["expiry_plot", "term_plot", "years"]
 
 Slice = Mapping[str, Any]
 _WIDTH, _HEIGHT = 460, 400
@@ -44,12 +44,17 @@ def expiry_plot(one: Slice, number: int, curve: Mapping[str, Sequence[float]]) -
     ]
     used = [row["residual"] for row in rows if row["used"] and row["residual"] is not None]
     worst = max(map(abs, used), default=0.0)
-    title = f"Volatilities at {one['expiry']:.4g} years"
+    title = f"Volatilities at {years(one['expiry'])}"
     text = (
         f"{len(strikes)} strikes from {min(strikes):g} to {max(strikes):g}, forward {one['forward']:.6g}. "
         f"{len(used)} quotes were used; the largest difference of model and market is {100 * worst:.3g} vol points."
     )
     return figure(f"expiry-{number}", title, text, _WIDTH, _HEIGHT, "".join(parts))
+
+
+def years(expiry: float) -> str:
+    """A time to expiry in words."""
+    return f"{expiry:.4g} year{'' if expiry == 1.0 else 's'}"
 
 
 def term_plot(rows: Sequence[Mapping[str, float | None]]) -> str:
@@ -118,8 +123,6 @@ def _residuals(rows: Sequence[Mapping[str, Any]], x: Axis) -> str:
 
 def _log_moneyness(x: Axis, forward: float) -> str:
     """Numbers of log-moneyness along the top of a plot whose axis is in strikes."""
-    from service.calibrations.axes import ticks
-
     low, high = math.log(max(x.low, 1e-3 * x.high) / forward), math.log(x.high / forward)
     marks = []
     for k in ticks(low, high, 6):

@@ -12,7 +12,7 @@ from urllib.parse import quote
 
 from engine import MODELS
 from service.calibrations.curves import curves_of
-from service.calibrations.plots import expiry_plot, term_plot
+from service.calibrations.plots import expiry_plot, term_plot, years
 from service.calibrations.tables import (
     correlation_table,
     figures,
@@ -83,7 +83,7 @@ def _plots(surface: Mapping[str, Any]) -> str:
     for number, i in enumerate(order):
         one = surface["slices"][i]
         plot = expiry_plot(one, number, {"strikes": curves.strikes[i], "vols": _sound(curves.vols[i])})
-        caption = f"{one['expiry']:.4g} years <span>forward {one['forward']:.6g}</span>"
+        caption = f"{years(one['expiry'])} <span>forward {one['forward']:.6g}</span>"
         out.append(f"<figure><figcaption>{caption}</figcaption>{plot}</figure>")
         model = curves.at_forward[i]
         market = _at_forward(one)
