@@ -75,21 +75,6 @@ def report(
     price = (fitted.at.value - quotes.value) * quotes.money
     ratio = feller_ratio(parameters)
     status = "stopped" if fitted.stopped else "at_bound" if at_bound else "converged"
-    doubts = Doubts(
-        status=status,
-        parameters=parameters,
-        standard_errors=errors.standard,
-        correlation=errors.correlation,
-        order=errors.order,
-        held=at_bound,
-        ends=coordinates.ends,
-        dependent=[one.dependent_name(coordinates.names) for one in coordinates.feller],
-        feller=ratio,
-        quotes=int(quotes.k.shape[0]),
-        left_out=int(sum(mask.size - np.count_nonzero(mask) for mask in quotes.used)),
-        expiries=int(quotes.batch.starts.shape[0]),
-        costs=tuple(costs),
-    )
     return Calibration(
         model=settings.model,
         status=status,
@@ -107,8 +92,31 @@ def report(
         iterations=fitted.iterations,
         evaluations=objective.evaluations + 1,
         slices=columns,
-        warnings=warnings_of(doubts, settings),
+        warnings=_warnings(objective, settings, errors, status, parameters, at_bound, costs),
     )
+
+
+def _warnings(
+    objective: Objective, settings: CalibrationSettings, errors: _Errors, status: str, parameters: dict[str, float],
+    at_bound: list[str], costs: Sequence[float],
+) -> list[str]:  # fmt: skip
+    coordinates, quotes = objective.coordinates, objective.quotes
+    doubts = Doubts(
+        status=status,
+        parameters=parameters,
+        standard_errors=errors.standard,
+        correlation=errors.correlation,
+        order=errors.order,
+        held=at_bound,
+        ends=coordinates.ends,
+        dependent=[one.dependent_name(coordinates.names) for one in coordinates.feller],
+        feller=feller_ratio(parameters),
+        quotes=int(quotes.k.shape[0]),
+        left_out=int(sum(mask.size - np.count_nonzero(mask) for mask in quotes.used)),
+        expiries=int(quotes.batch.starts.shape[0]),
+        costs=tuple(costs),
+    )
+    return warnings_of(doubts, settings)
 
 
 def _rms(errors: Floats) -> float:

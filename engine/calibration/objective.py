@@ -103,18 +103,34 @@ class Objective:
         return found
 
     def _evaluate(self, x: Floats) -> Evaluation:
-        quotes = self.quotes
-        values, slope = self.coordinates.values(x)
-        nothing = Evaluation(
-            x,
-            np.full(self.quote_count + len(self._prior.at), np.inf),
-            np.zeros((self.quote_count + len(self._prior.at), x.shape[0])),
-            np.full(quotes.k.shape, np.nan),
-            np.full(quotes.k.shape, np.nan),
-        )
+        quotes, pull = self.quotes, self._prior
         self.evaluations += 1
+        values, slope = self.coordinates.values(x)
+        found = self._priced(values)
+        if found is None:
+            return self._nothing(x)
+        deviation = total_deviation(quotes.k, found[0])
+        vols = deviation.deviations / quotes.root_tau
+        if self.settings.residuals == "vol":
+            error = vols - quotes.vols
+            scale = quotes.weights / (density_of(quotes.k, deviation.deviations) * quotes.root_tau)
+        else:
+            error = (found[0] - quotes.value) * quotes.money
+            scale = quotes.weights * quotes.money
+        root = np.sqrt(self.quote_count)
+        rows = (scale / root)[:, None] * (found[1:].T @ slope)
+        residuals = np.concatenate([quotes.weights * error / root, pull.scale * (values[pull.at] - pull.toward)])
+        jacobian = np.concatenate([rows, pull.scale[:, None] * slope[pull.at]])
+        known = (deviation.statuses == int(Status.OK)).all() and np.isfinite(jacobian).all()
+        if not (known and np.isfinite(residuals).all()):
+            return self._nothing(x)
+        return Evaluation(x, residuals, jacobian, vols, found[0])
+
+    def _priced(self, values: Floats) -> Floats | None:
+        """Values and their derivatives by the parameters (1 + P, n), or None where the model cannot be valued."""
         if not np.isfinite(values).all():
-            return nothing
+            return None
+        quotes = self.quotes
         model = model_from(self.kind, dict(zip(self.coordinates.names, values, strict=True)))
         try:
             model.check()
@@ -127,26 +143,12 @@ class Objective:
                 node_limit=NODE_LIMIT,
             )
         except (InputError, RefusedError):
-            return nothing
-        value, by_parameter = group.value[0], group.value[1:]
-        deviation = total_deviation(quotes.k, value)
-        if (deviation.statuses != int(Status.OK)).any():
-            return nothing
-        vols = deviation.deviations / quotes.root_tau
-        if self.settings.residuals == "vol":
-            error = vols - quotes.vols
-            scale = quotes.weights / (density_of(quotes.k, deviation.deviations) * quotes.root_tau)
-        else:
-            error = (value - quotes.value) * quotes.money
-            scale = quotes.weights * quotes.money
-        root = np.sqrt(self.quote_count)
-        rows = (scale / root)[:, None] * (by_parameter.T @ slope)
-        pull = self._prior
-        residuals = np.concatenate([quotes.weights * error / root, pull.scale * (values[pull.at] - pull.toward)])
-        jacobian = np.concatenate([rows, pull.scale[:, None] * slope[pull.at]])
-        if not (np.isfinite(jacobian).all() and np.isfinite(residuals).all()):
-            return nothing
-        return Evaluation(x, residuals, jacobian, vols, value)
+            return None
+        return group.value
+
+    def _nothing(self, x: Floats) -> Evaluation:
+        rows, none = self.quote_count + len(self._prior.at), np.full(self.quotes.k.shape, np.nan)
+        return Evaluation(x, np.full(rows, np.inf), np.zeros((rows, x.shape[0])), none, none)
 
 
 @dataclass(frozen=True, slots=True)
