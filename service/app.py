@@ -17,6 +17,7 @@ from service.calibrations.routes import OPERATIONS as CALIBRATIONS
 from service.calibrations.routes import add_calibration_routes
 from service.chains.routes import OPERATION as CHAINS
 from service.compute import Compute
+from service.greeks.routes import OPERATION as GREEKS
 from service.implied_vols.routes import OPERATION as IMPLIED_VOLS
 from service.jobs.desk import Desk
 from service.models.routes import add_models_route
@@ -31,7 +32,7 @@ from service.telemetry import Metrics, Telemetry, record_of
 
 __all__ = ["ARRAY_OPERATIONS", "create_app"]
 
-ARRAY_OPERATIONS: Final[tuple[ArrayOperation[Any], ...]] = (SMILES, IMPLIED_VOLS, CHAINS)
+ARRAY_OPERATIONS: Final[tuple[ArrayOperation[Any], ...]] = (SMILES, GREEKS, IMPLIED_VOLS, CHAINS)
 
 
 def create_app(settings: Settings) -> FastAPI:

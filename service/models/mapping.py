@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from engine import MODELS, Model, ParameterSpec, Payoff
-from service.terms.models import example_of
+from service.terms.models import example_of, greeks_of
 
 __all__ = ["models_answer"]
 
@@ -24,6 +24,8 @@ def _model(kind: type[Model]) -> dict[str, Any]:
         "source": kind.source,
         "parameters": [_parameter(kind.name, spec) for spec in kind.parameters],
         "outputs": _OUTPUTS,
+        "greeks": greeks_of(kind.name),
+        "sensitivities": kind.sensitivity_names,
         "payoffs": [payoff.word for payoff in Payoff],
     }
 

@@ -28,7 +28,10 @@ def add_models_route(router: APIRouter) -> None:
         operation_id="list_models",
         tags=["Reference"],
         summary="Every model with its parameters, ranges, units and source",
-        description="What /v1/smiles takes. Outside a range a request is refused, with the range in the answer.",
+        description=(
+            "What /v1/smiles and /v1/greeks take, and which outputs, Greeks and sensitivities each model has. Outside "
+            "a range a request is refused, with the range in the answer."
+        ),
         response_model=None,
         response_description="Every model of this service.",
         responses={200: {"model": ModelsAnswer}, **refusals("not-acceptable")},

@@ -55,6 +55,12 @@ class ModelAnswer(Answer):
         unit="none",
         example=["price", "implied_vol", "error_bound"],
     )
+    greeks: list[str] = described(
+        "Greeks it has, as in greeks of /v1/greeks.", unit="none", example=["delta", "gamma", "minimum_variance_delta"]
+    )
+    sensitivities: list[str] = described(
+        "Parameters by which /v1/greeks gives derivatives.", unit="none", example=["v0", "kappa"]
+    )
     payoffs: list[str] = described("Payoffs it prices.", unit="none", example=["call", "put", "otm"])
 
 
@@ -83,6 +89,8 @@ class ModelsAnswer(Answer):
                     }
                 ],
                 "outputs": ["price", "implied_vol", "error_bound"],
+                "greeks": ["delta", "gamma", "theta", "rho", "vega"],
+                "sensitivities": ["volatility"],
                 "payoffs": ["call", "put", "otm", "digital_call", "digital_put"],
             }
         ],

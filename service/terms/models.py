@@ -13,10 +13,10 @@ from typing import TYPE_CHECKING, Annotated, Any, Final, Literal, TypeAlias
 
 from pydantic import Field, create_model
 
-from engine import MODELS, Model, ParameterSpec
+from engine import GREEKS, MODELS, Model, ParameterSpec
 from service.fields import Asked, described
 
-__all__ = ["AnyModel", "ModelAsked", "engine_model", "example_of"]
+__all__ = ["AnyModel", "ModelAsked", "engine_model", "example_of", "greeks_of"]
 
 # One example per parameter. Heston's are the published set of A. Lewis, "Heston Model Reference Prices" (2019),
 # Variance Gamma's that of Fang and Oosterlee (2008), from memory; the rest are ordinary values.
@@ -30,6 +30,9 @@ _EXAMPLES: Final[dict[str, float]] = {
     "jump_intensity": 0.5,
     "jump_mean": -0.1,
     "jump_stdev": 0.15,
+    "up_probability": 0.4,
+    "up_rate": 10.0,
+    "down_rate": 5.0,
     "variance_gamma.sigma": 0.12,
     "variance_gamma.theta": -0.14,
     "variance_gamma.nu": 0.2,
@@ -46,12 +49,14 @@ class ModelAsked(Asked):
 
 
 def example_of(model: str, parameter: str) -> float:
-    """An ordinary value of a parameter: that of the model, of the place in it, or of the name alone."""
+    """An ordinary value of a parameter: that of the model, of the place in it, or of the name alone; for a name that is
+    not known here, the middle of its range."""
     plain = parameter.rpartition(".")[2]
     for name in (f"{model}.{parameter}", parameter, plain):
         if name in _EXAMPLES:
             return _EXAMPLES[name]
-    raise KeyError(f"{model} has a parameter {parameter} without an example")
+    (spec,) = (spec for spec in MODELS[model].parameters if spec.name == parameter)
+    return 0.5 * (spec.lower + spec.upper)
 
 
 def _field(model: str, spec: ParameterSpec) -> Any:
@@ -115,3 +120,11 @@ def engine_model(asked: ModelAsked) -> Model:
         values["factors"] = tuple(heston(**factor.model_dump()) for factor in values["factors"])
     model: Model = kind(**values)
     return model
+
+
+def greeks_of(name: str) -> list[str]:
+    """The Greeks that a model has: those of a variance factor only where there is one."""
+    fields = _SCHEMAS[name].model_fields
+    ordinary = {field: said.examples[0] for field, said in fields.items() if said.examples}
+    has_variance = bool(engine_model(_SCHEMAS[name].model_validate(ordinary)).variance_weights())
+    return [greek for greek in GREEKS if has_variance or greek != "minimum_variance_delta"]
