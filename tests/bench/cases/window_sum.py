@@ -7,7 +7,7 @@ from collections.abc import Iterable
 import numpy as np
 from scipy import fft
 
-from engine.transform.window import grid_length, inverse_window, sum_at_points
+from engine.transform.window import grid_length, grid_of, inverse_window, sums_at
 from tests.bench.table import Table, count, error, ratio, seconds
 from tests.bench.timing import Stopwatch
 
@@ -33,26 +33,26 @@ def _row(watch: Stopwatch, nodes: int, points: int) -> tuple[str, ...]:
     c = (size * np.exp(2j * np.pi * rng.random(nodes)))[None, :]
     c[0, 0] = c[0, 0].real
     position = rng.random(points)
-    row = np.zeros(points, dtype=np.int64)
-    weighted = c * inverse_window(nodes)
+    offset, length = np.zeros(points, dtype=np.int64), np.full(points, grid_length(nodes))
     half = np.where(np.arange(nodes) == 0, 0.5, 1.0) * c[0]
     angle = 2.0 * np.pi * np.arange(nodes)
 
-    def direct() -> object:
+    def window() -> np.ndarray:
+        return sums_at(grid_of(c * inverse_window(nodes)), offset, length, position)[0]
+
+    def direct() -> np.ndarray:
         return (np.exp(1j * position[:, None] * angle) @ half).real
 
     times = watch.together(
         {
-            "window": lambda: sum_at_points(c * inverse_window(nodes), row, position),
-            "fft": lambda: fft.irfft(weighted, n=grid_length(nodes), axis=-1),
+            "window": window,
+            "fft": lambda: fft.irfft(c, n=grid_length(nodes), axis=-1),
             "direct": direct,
         }
     )
     exact = _extended(half, position)
     scale = float(np.sum(np.abs(half)))
-    worst, worst_direct = (
-        float(np.max(np.abs(found - exact))) / scale for found in (sum_at_points(weighted, row, position), direct())
-    )
+    worst, worst_direct = (float(np.max(np.abs(found - exact))) / scale for found in (window(), direct()))
     return (
         f"{count(nodes)} x {count(points)}",
         seconds(times["window"].best),
