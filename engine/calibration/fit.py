@@ -5,7 +5,7 @@ in three stages:
 
 1. *approach* from each start, pricing as exactly as the residuals deserve;
 2. with a robust loss, its scale from the residuals of the linear fit (1.345 normal-consistent median absolute
-   deviations: Huber 1981, from memory), and the approach again;
+   deviations: Huber 1981, from memory), and the approach again, until the scale no longer falls;
 3. *settle* at the final pricing tolerance. A coordinate that has come to one of its ends and is pushed outward is put
    on the end exactly and held; it is let go again, for good, should the slope there point inward once the others have
    settled.
@@ -37,6 +37,8 @@ __all__ = ["calibrate"]
 
 _NEAR = 1e-2  # of the way between the ends: near enough to be tried on the end itself
 _ROUNDS = 6  # of holding and letting go
+_RESCALED = 6  # times the scale of a robust loss is read again: outliers bend the fit they are first measured by
+_SETTLED = 0.9  # of the last scale
 _LEVEL = 1e-7  # of the cost, across the whole room of a coordinate
 _TRIED = 2  # of the starts of models with jumps, those that begin nearest
 _PERFECT = 1e-20  # cost (1e-12 in volatility) at which further starts cannot matter
@@ -153,9 +155,13 @@ def _settled(objective: Objective, best: _Run, settings: CalibrationSettings) ->
     iterations, loss = best.iterations, Loss.linear()
     if settings.loss != "linear":
         objective.restart()
-        loss = Loss.scaled(settings.loss, objective.at(best.x).residuals, objective.quote_count)
-        best = _descend(objective, best.x, loss, settings, _APPROACH)
-        iterations += best.iterations
+        for _ in range(_RESCALED):
+            last, loss = loss, Loss.scaled(settings.loss, objective.at(best.x).residuals, objective.quote_count)
+            if last.robust and loss.scale > _SETTLED * last.scale:
+                loss = last
+                break
+            best = _descend(objective, best.x, loss, settings, _APPROACH)
+            iterations += best.iterations
     objective.tighten()
     held, released = np.zeros(best.x.shape, dtype=bool), np.zeros(best.x.shape, dtype=bool)
     run = best
