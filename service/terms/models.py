@@ -19,7 +19,8 @@ from service.fields import Asked, described
 __all__ = ["AnyModel", "ModelAsked", "engine_model", "example_of", "greeks_of"]
 
 # One example per parameter. Heston's are the published set of A. Lewis, "Heston Model Reference Prices" (2019),
-# Variance Gamma's that of Fang and Oosterlee (2008), from memory; the rest are ordinary values.
+# Variance Gamma's that of Fang and Oosterlee (2008) and Kou's jumps those of Kou (2002), both from memory; the rest are
+# ordinary values.
 _EXAMPLES: Final[dict[str, float]] = {
     "volatility": 0.2,
     "v0": 0.04,
@@ -36,6 +37,9 @@ _EXAMPLES: Final[dict[str, float]] = {
     "variance_gamma.sigma": 0.12,
     "variance_gamma.theta": -0.14,
     "variance_gamma.nu": 0.2,
+    "up_probability": 0.4,
+    "up_rate": 10.0,
+    "down_rate": 5.0,
     "factors.1.kappa": 1.0,
     "factors.1.theta": 0.04,
     "factors.1.sigma": 0.3,

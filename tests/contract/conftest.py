@@ -13,9 +13,9 @@ from tests.contract.contract import Contract
 
 
 @pytest.fixture(scope="session")
-def base() -> Iterator[str]:
-    """Address of a server with the default settings."""
-    with running_server(Settings()) as address:
+def base(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
+    """Address of a server with the default settings, but for a data folder of its own."""
+    with running_server(Settings(data_dir=str(tmp_path_factory.mktemp("data")))) as address:
         yield address
 
 

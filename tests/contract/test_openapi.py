@@ -11,7 +11,10 @@ import httpx
 import pytest
 from jsonschema import Draft202012Validator
 
+from service.demo.server import running_server
+from service.jobs.pool import running_workers
 from service.openapi_export import contract_files, main
+from service.settings import Settings
 from tests.contract.contract import Contract
 
 FOLDER = Path(__file__).parents[2] / "openapi"
@@ -45,6 +48,7 @@ def test_every_operation_is_described_and_has_an_example(contract: Contract) -> 
     operations = list(_operations(contract.document))
     assert {f"{method} {path}" for method, path, _ in operations} >= {
         "post /v1/smiles",
+        "post /v1/greeks",
         "post /v1/implied-vols",
         "post /v1/chains",
         "get /v1/models",
@@ -97,19 +101,36 @@ def test_every_schema_is_a_schema_and_every_reference_leads_somewhere(contract: 
     assert nested == set()
 
 
-@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
-def test_every_example_runs(contract: Contract, path: Path) -> None:
-    """Sent as the file says, answered 200, and the answer fits the document."""
-    example = json.loads(path.read_text(encoding="utf-8"))
+@pytest.fixture(scope="module")
+def with_jobs(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Contract]:
+    """A server with a store of its own and a worker, ready."""
+    settings = Settings(data_dir=str(tmp_path_factory.mktemp("jobs")), access_log=False)
+    with running_workers(settings, 1), running_server(settings) as base, httpx.Client(base_url=base) as client:
+        while client.get("/v1/calibrations").status_code == 503 or client.get("/readyz").status_code == 503:
+            pass
+        yield Contract(client, client.get("/openapi.json").json())
+
+
+def _send(contract: Contract, example: dict[str, Any], **headers: str) -> httpx.Response:
     content = json.dumps(example["body"]).encode() if "body" in example else None
-    answer = contract.client.request(example["method"], example["path"], headers=example["headers"], content=content)
-    if example["path"] == "/readyz":  # a server may still be warming up
-        for _ in range(1000):
-            if answer.status_code == 200:
-                break
-            answer = contract.client.get("/readyz")
-    assert answer.status_code == 200, answer.text
-    contract.hold(answer, example["method"].lower(), example["path"])
+    said = {**example["headers"], **headers}
+    return contract.client.request(example["method"], example["path"], headers=said, content=content, timeout=60.0)
+
+
+@pytest.mark.parametrize("path", EXAMPLES, ids=lambda path: path.stem)
+def test_every_example_runs(with_jobs: Contract, path: Path) -> None:
+    """Sent as the file says, answered 200 or 202, and the answer fits the document. Where an example is about a job,
+    the example that submits one makes it."""
+    example = json.loads(path.read_text(encoding="utf-8"))
+    template = example["path"]
+    if "{id}" in template:
+        submitted = json.loads((path.parent / "submit_calibration.json").read_text(encoding="utf-8"))
+        job = _send(with_jobs, submitted, Prefer="wait=30").json()
+        assert job["status"] == "succeeded"
+        example["path"] = template.replace("{id}", job["id"])
+    answer = _send(with_jobs, example)
+    assert answer.status_code == (202 if path.stem == "submit_calibration" else 200), answer.text
+    with_jobs.hold(answer, example["method"].lower(), template)
 
 
 def test_refusals_are_documented_with_their_pages(contract: Contract) -> None:
