@@ -11,7 +11,6 @@ from engine.calibration import (
     Prior,
     calibrate,
 )
-from engine.calibration import CalibratedSlice, Calibration, CalibrationSettings, CalibrationSlice, Prior, calibrate
 from engine.errors import EngineError, InputError, RefusedError
 from engine.greeks import GREEKS, GreekSlice, price_greeks
 from engine.market.chain import ChainExpiry, QuoteFlag, flag_words
@@ -20,6 +19,7 @@ from engine.models.bates import Bates
 from engine.models.black import Black
 from engine.models.double_heston import DoubleHeston
 from engine.models.heston import Heston
+from engine.models.kou import Kou
 from engine.models.merton import Merton
 from engine.models.variance_gamma import VarianceGamma
 from engine.protocols import Model, ParameterSpec
@@ -66,5 +66,5 @@ __all__ = [
     "year_fraction",
 ]
 
-_KINDS: tuple[type[Model], ...] = (Black, Heston, Bates, Merton, VarianceGamma, DoubleHeston)
+_KINDS: tuple[type[Model], ...] = (Black, Heston, Bates, Merton, Kou, VarianceGamma, DoubleHeston)
 MODELS: dict[str, type[Model]] = {kind.name: kind for kind in _KINDS}

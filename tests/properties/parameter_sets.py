@@ -70,6 +70,17 @@ def _merton(u: Sequence[float]) -> dict[str, Any]:
     return {"volatility": _spread(u[0], 1e-3, 5.0), **_jumps(u[1:])}
 
 
+def _kou(u: Sequence[float]) -> dict[str, Any]:
+    """Five coordinates; mean jumps from 1e-3 to 5 in the log, of which the forward allows 0.95 upward."""
+    return {
+        "volatility": _spread(u[0], 1e-3, 5.0),
+        "jump_intensity": _or_zero(u[1], 1e-3, 100.0),
+        "up_probability": 0.0 if u[2] < 0.05 else (1.0 if u[2] > 0.95 else (u[2] - 0.05) / 0.9),
+        "up_rate": 1.0 + _spread(u[3], 0.05, 1e3),
+        "down_rate": _spread(u[4], 0.2, 1e3),
+    }
+
+
 def _bates(u: Sequence[float]) -> dict[str, Any]:
     """Nine coordinates. Jumps of nearly one size leave the reference no contour: the deviation is at least a sixth of
     the mean, and Merton's model, which has a series, stands in for the rest."""
@@ -94,6 +105,7 @@ _MAKERS: dict[str, tuple[int, Callable[[Sequence[float]], dict[str, Any]]]] = {
     "heston": (6, _heston),
     "bates": (9, _bates),
     "merton": (4, _merton),
+    "kou": (5, _kou),
     "variance_gamma": (3, _variance_gamma),
     "double_heston": (12, _double_heston),
 }

@@ -171,6 +171,7 @@ _TO_BLACK: dict[str, Callable[[float], dict[str, Any]]] = {
     "heston": lambda e: {"v0": 0.04, "kappa": 1.5, "theta": 0.09, "sigma": e, "rho": -0.7},
     "bates": lambda e: {**_TO_BLACK["heston"](e), "jump_intensity": e, "jump_mean": -0.1, "jump_stdev": 0.2},
     "merton": lambda e: {"volatility": 0.3, "jump_intensity": e, "jump_mean": -0.1, "jump_stdev": 0.2},
+    "kou": lambda e: {"volatility": 0.3, "jump_intensity": e, "up_probability": 0.4, "up_rate": 10.0, "down_rate": 5.0},
     "variance_gamma": lambda e: {"sigma": 0.3, "theta": -0.1, "nu": 1e-3 * e},
     "double_heston": lambda e: {
         "factors": [

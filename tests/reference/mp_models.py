@@ -420,13 +420,13 @@ class _NormalInverseGaussianAt:
 
 @dataclass(frozen=True)
 class Kou:
-    """Kou (2002): double-exponential log jumps, up with probability ``up`` (``rate_up``), else down (``rate_down``)."""
+    """Kou (2002): double-exponential log jumps, up with ``up_probability`` (of rate ``up_rate``), else down."""
 
     volatility: Any
     jump_intensity: Any
-    up: Any
-    rate_up: Any
-    rate_down: Any
+    up_probability: Any
+    up_rate: Any
+    down_rate: Any
 
     def prepare(self, tau: Any) -> Any:
         return _Sum([Black(self.volatility).prepare(tau), _ExponentialJumps(self, tau)])
@@ -437,8 +437,8 @@ class _ExponentialJumps:
         return QUARTER
 
     def __init__(self, model: Kou, tau: Any) -> None:
-        self.count, self.up = mpfr(model.jump_intensity) * mpfr(tau), mpfr(model.up)
-        self.rate_up, self.rate_down = mpfr(model.rate_up), mpfr(model.rate_down)
+        self.count, self.up = mpfr(model.jump_intensity) * mpfr(tau), mpfr(model.up_probability)
+        self.rate_up, self.rate_down = mpfr(model.up_rate), mpfr(model.down_rate)
         self.compensator = self._jump(mpfr(1)) - 1
 
     def _jump(self, w: Any) -> Any:
