@@ -30,6 +30,7 @@ class Blobs:
     def put(self, job: str, name: str, data: bytes) -> bool:
         """Write a file once; whether it was this call that wrote it. Raises OSError where the folder fails."""
         place = self._place(job) / name
+        self._folder.mkdir(mode=0o700, parents=True, exist_ok=True)
         place.parent.mkdir(parents=True, exist_ok=True)
         beside = place.with_name(f".{place.name}.{secrets.token_hex(8)}")
         try:

@@ -6,6 +6,7 @@ quarter of a second on SQLite, two seconds on PostgreSQL. A worker waits: its wo
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Final
 
@@ -19,6 +20,7 @@ __all__ = ["IMPATIENT", "PATIENT", "BeatBook", "address", "job_folder", "open_en
 IMPATIENT: Final = 0.25
 PATIENT: Final = 30.0
 _SQLITE: Final = "sqlite:///"
+_FILE: Final = "jobs.sqlite"
 _CONNECT_SECONDS: Final = 2
 _STATEMENT_MILLISECONDS: Final = 2_000
 
@@ -32,7 +34,7 @@ def address(settings: Settings) -> str:
     """The address of the store, as SQLAlchemy takes it."""
     given = settings.job_store.get_secret_value()
     if not given:
-        return f"{_SQLITE}{Path(settings.data_dir) / 'jobs.sqlite'}"
+        return f"{_SQLITE}{Path(settings.data_dir) / _FILE}"
     scheme, rest = given.split("://", 1)
     return f"postgresql+psycopg://{rest}" if scheme in ("postgresql", "postgres") else given
 
@@ -61,7 +63,9 @@ def open_engine(settings: Settings, *, patience: float) -> Engine:
         return sa.create_engine(
             url, connect_args=options, pool_pre_ping=True, pool_size=5, pool_timeout=_CONNECT_SECONDS
         )
-    Path(settings.data_dir).mkdir(parents=True, exist_ok=True)
+    Path(settings.data_dir).mkdir(mode=0o700, parents=True, exist_ok=True)
+    if url == f"{_SQLITE}{Path(settings.data_dir) / _FILE}":  # for nobody else's eyes; its journals have the same mode
+        os.close(os.open(Path(settings.data_dir) / _FILE, os.O_CREAT | os.O_RDWR, 0o600))
     engine = sa.create_engine(url, connect_args={"timeout": patience}, pool_size=5, pool_timeout=PATIENT)
 
     @sa.event.listens_for(engine, "connect")
