@@ -31,6 +31,7 @@ from engine.transform.bounds import log_moduli
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
 from engine.transform.record import EPS
+from engine.transform.samples import sample
 
 __all__ = ["BentSum", "bent_sums"]
 
@@ -195,13 +196,8 @@ def _bent_sum(
     )
     count, h = _steps(bend, decades)
     z, dz = _line(bend.w1, bend.b, bend.w, h * np.arange(count, dtype=np.float64))
-    gradient: Any = None
-    gradient_size: Any = None
-    if any(kernel.parameter is not None for kernel in kernels):
-        found = model.log_cf_gradient(z[None, :], tau, along_path=True)
-        log_phi, size, gradient, gradient_size = found.log_value, found.size, found.gradient, found.gradient_size
-    else:
-        log_phi, size = model.log_cf_sized(z[None, :], tau, along_path=True)
+    found = sample(model, z[None, :], tau, kernels, along_path=True)
+    log_phi, size = found.log_phi, found.size
     iz = 1j * z
     k_near = span[0] if sector[0] < 0.0 else span[1]
     lift = z.imag + p
@@ -217,9 +213,9 @@ def _bent_sum(
         terms = base * kernel.factor(iz)
         relative = lost
         if kernel.parameter is not None:
-            g = gradient[kernel.parameter][0]
+            g = found.gradient[kernel.parameter][0]
             with np.errstate(divide="ignore", invalid="ignore"):
-                relative = lost + np.where(g != 0.0, gradient_size[kernel.parameter][0] / np.abs(g), 0.0)
+                relative = lost + np.where(g != 0.0, found.gradient_size[kernel.parameter][0] / np.abs(g), 0.0)
             terms *= g
         modulus = np.abs(terms) * largest
         rounding[i] = EPS * float(modulus @ relative)

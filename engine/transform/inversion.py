@@ -20,7 +20,7 @@ from engine.protocols import Model
 from engine.transform import plan_cache
 from engine.transform.kernels import Kernel
 from engine.transform.moments import NOTHING
-from engine.transform.plan import Plan, plan_rows
+from engine.transform.plan import plan_rows
 from engine.transform.reach import Strikes, reach_of
 from engine.transform.record import EPS, RowValues, assemble
 from engine.transform.rows import Rows, counted_nodes, evaluate
@@ -62,88 +62,91 @@ def invert(
     the tolerance the bound says so. Raises RefusedError when the plans need more than ``limit`` nodes.
     """
     n = strikes.k.shape[0]
-    value, bound = np.empty((len(kernels), n)), np.empty((len(kernels), n))
+    work = _Work(tolerance, kernels, limit, limit, np.empty((len(kernels), n)), np.empty((len(kernels), n)))
     contours: list[Contour] = []
+    count = tau.shape[0]
     with np.errstate(over="ignore", under="ignore", invalid="ignore", divide="ignore"):  # a bound says what was lost
-        _by_chunks(model, tau, strikes, tolerance, kernels, limit, value, bound, contours)
-    return Inversion(value, bound, contours)
+        for start in range(0, count, _CHUNK):
+            stop = min(start + _CHUNK, count)
+            lo = int(strikes.starts[start])
+            hi = int(strikes.starts[stop]) if stop < count else n
+            part = Strikes(strikes.k[lo:hi], strikes.slice_of[lo:hi] - start, strikes.starts[start:stop] - lo)
+            sub = model.take(np.arange(start, stop)) if count > _CHUNK else model
+            rows = _prepared(work, sub, tau[start:stop], part, tolerance)
+            work.value[:, lo:hi], work.bound[:, lo:hi] = _at_strikes(rows, part, kernels)
+            contours.extend(_contours(rows))
+            _repair(work, sub, tau[start:stop], part, lo)
+    return Inversion(work.value, work.bound, contours)
 
 
-def _by_chunks(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int,
-    value: Floats, bound: Floats, contours: list[Contour],
-) -> None:  # fmt: skip
-    count, n, left = tau.shape[0], strikes.k.shape[0], limit
-    for start in range(0, count, _CHUNK):
-        stop = min(start + _CHUNK, count)
-        members = np.arange(start, stop)
-        lo = int(strikes.starts[start])
-        hi = int(strikes.starts[stop]) if stop < count else n
-        part = Strikes(strikes.k[lo:hi], strikes.slice_of[lo:hi] - start, strikes.starts[start:stop] - lo)
-        sub = model.take(members) if count > _CHUNK else model
-        rows, left = _prepared(sub, tau[start:stop], part, tolerance, kernels, limit, left)
-        value[:, lo:hi], bound[:, lo:hi] = _at_strikes(rows, part, kernels)
-        contours.extend(_contours(rows))
-        stuck = np.zeros(hi - lo, dtype=np.bool_)
-        for apart in (False, True):
-            own = bound[0, lo:hi]
-            missed = np.flatnonzero((own > tolerance * value[0, lo:hi]) & (own > 1e-290) & ~stuck)
-            if missed.shape[0] == 0 or (apart and missed.shape[0] > _MOST_APART):
-                break
-            before = own[missed].copy()
-            left = _improve(
-                sub, tau[start:stop], part, missed, lo, tolerance, kernels, value, bound, limit, left, apart
-            )
-            stuck[missed] = bound[0, lo + missed] > 0.5 * before  # double precision holds no more
+@dataclass(slots=True)
+class _Work:
+    """One call: what was asked, the nodes left of the limit, and the answers (K, n) as they come to stand."""
+
+    tolerance: float
+    kernels: list[Kernel]
+    limit: int
+    left: int
+    value: Floats
+    bound: Floats
+
+    def missed(self, part: slice) -> Ints:
+        """Positions in ``part`` whose bound misses the tolerance and is not nothing."""
+        own = self.bound[0, part]
+        return np.flatnonzero((own > self.tolerance * self.value[0, part]) & (own > 1e-290))
 
 
-def _improve(
-    model: Model, tau: Floats, strikes: Strikes, missed: Ints, lo: int, tolerance: float, kernels: list[Kernel],
-    value: Floats, bound: Floats, limit: int, left: int, apart: bool,
-) -> int:  # fmt: skip
-    """Plan the missed strikes, or each of them by itself, for the tolerance that would have been met; keep the
-    better."""
+def _repair(work: _Work, model: Model, tau: Floats, strikes: Strikes, lo: int) -> None:
+    """Slice by slice, so that a slice's answer does not depend on its neighbours: plan the missed strikes together,
+    then those that this has helped and that still miss one by one."""
+    everything = work.missed(slice(lo, lo + strikes.k.shape[0]))
+    for member in np.unique(strikes.slice_of[everything]):
+        own = everything[strikes.slice_of[everything] == member]
+        before = work.bound[0, lo + own].copy()
+        _improve(work, model, tau, strikes, own, lo, apart=False)
+        after = work.bound[0, lo + own]
+        helped = (after <= 0.5 * before) & (after > work.tolerance * work.value[0, lo + own])
+        if 0 < np.count_nonzero(helped) <= _MOST_APART:
+            _improve(work, model, tau, strikes, own[helped], lo, apart=True)
+
+
+def _improve(work: _Work, model: Model, tau: Floats, strikes: Strikes, missed: Ints, lo: int, *, apart: bool) -> None:
+    """Plan the missed strikes of one slice, or each of them by itself, for the tolerance that would have been met;
+    keep the better."""
     at = lo + missed
-    short = float(np.min(value[0, at] / bound[0, at])) * tolerance
-    tighter = tolerance * float(np.exp2(np.floor(np.log2(np.clip(short, _TIGHTEST, 0.5)))))
-    if apart:
-        members, slice_of = strikes.slice_of[missed], np.arange(missed.shape[0])
-    else:
-        members, slice_of = np.unique(strikes.slice_of[missed], return_inverse=True)
+    short = float(np.min(work.value[0, at] / work.bound[0, at])) * work.tolerance
+    tighter = work.tolerance * float(np.exp2(np.floor(np.log2(np.clip(short, _TIGHTEST, 0.5)))))
+    owner = strikes.slice_of[missed]
+    members, slice_of = (owner, np.arange(missed.shape[0])) if apart else (owner[:1], np.zeros_like(owner))
     again = Strikes(strikes.k[missed], slice_of, np.searchsorted(slice_of, np.arange(members.shape[0])))
-    rows, left = _prepared(model.take(members), tau[members], again, tighter, kernels, limit, left, rounded=False)
-    new_value, new_bound = _at_strikes(rows, again, kernels)
-    better = new_bound < bound[:, at]
-    value[:, at] = np.where(better, new_value, value[:, at])
-    bound[:, at] = np.where(better, new_bound, bound[:, at])
-    return left
+    rows = _prepared(work, model.take(members), tau[members], again, tighter, rounded=False)
+    new_value, new_bound = _at_strikes(rows, again, work.kernels)
+    better = new_bound < work.bound[:, at]
+    work.value[:, at] = np.where(better, new_value, work.value[:, at])
+    work.bound[:, at] = np.where(better, new_bound, work.bound[:, at])
 
 
 def _prepared(
-    model: Model, tau: Floats, strikes: Strikes, tolerance: float, kernels: list[Kernel], limit: int, left: int,
-    *, rounded: bool = True,
-) -> tuple[Rows, int]:  # fmt: skip
-    """Rows of a chunk, from the cache where all inputs are the same, and what is left of the node limit."""
+    work: _Work, model: Model, tau: Floats, strikes: Strikes, tolerance: float, *, rounded: bool = True
+) -> Rows:
+    """Rows of a chunk, from the cache where all inputs are the same; counted against the node limit."""
     reach = reach_of(strikes, np.sqrt(model.mean_variance(tau)).reshape(-1), rounded=rounded)
-    power = min(kernel.power for kernel in kernels)
+    power = min(kernel.power for kernel in work.kernels)
 
     def fresh(members: Ints | None) -> Rows:
         sub, sub_tau, sub_reach = model, tau, reach
         if members is not None:
             sub, sub_tau, sub_reach = model.take(members), tau[members], reach.take(members)
         plan = plan_rows(sub, sub_tau, sub_reach, tolerance=tolerance, power=power)
-        wanted = _counted(plan)
-        if wanted > left:
-            need = limit - left + wanted
-            raise RefusedError("slices", f"would need {need} transform nodes or more", allowed=f"at most {limit}")
-        return evaluate(sub, sub_tau, plan, kernels)
+        wanted = counted_nodes(plan.nodes, plan.nodes)
+        if wanted > work.left:
+            need = work.limit - work.left + wanted
+            raise RefusedError("slices", f"would need {need} transform nodes or more", allowed=f"at most {work.limit}")
+        return evaluate(sub, sub_tau, plan, work.kernels)
 
-    rows = plan_cache.rows_of(model, tau, reach, (tolerance, tuple(kernels)), fresh)
-    return rows, left - rows.counted
-
-
-def _counted(plan: Plan) -> int:
-    return counted_nodes(plan.nodes, plan.nodes)
+    rows = plan_cache.rows_of(model, tau, reach, (tolerance, tuple(work.kernels)), fresh)
+    work.left -= rows.counted
+    return rows
 
 
 def _contours(rows: Rows) -> list[Contour]:

@@ -9,7 +9,6 @@ its error. ``phi`` is scaled by its value at ``u = 0``, so that no exponent leav
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 
@@ -18,6 +17,7 @@ from engine.protocols import Model
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
 from engine.transform.record import EPS
+from engine.transform.samples import sample
 from engine.transform.window import WINDOW_ERROR, grid_of, inverse_window
 
 __all__ = ["LineSums", "line_sums"]
@@ -25,8 +25,8 @@ __all__ = ["LineSums", "line_sums"]
 
 @dataclass(frozen=True, slots=True)
 class LineSums:
-    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding``, ``slope`` (change per unit of ``k``)
-    and ``pieces`` (aliasing and truncation bound before the strike factor) in the same units; (K, r) each."""
+    """``grid`` (K, r, points) in units of ``exp(log_scale)`` (r,); ``rounding`` and ``slope`` (change per unit of
+    ``k``) in the same units, and ``last``, the moduli of the derivatives at the last node (1 for none); (K, r) each."""
 
     grid: Floats
     log_scale: Floats
@@ -42,13 +42,8 @@ def line_sums(model: Model, tau: Floats, plan: Plan, rows: Ints, kernels: list[K
     u = h[:, None] * np.arange(nodes)
     iz = p + 1j * u
     z = u - 1j * p
-    gradient: Any = None
-    gradient_size: Any = None
-    if any(kernel.parameter is not None for kernel in kernels):
-        found = model.log_cf_gradient(z, tau)
-        log_phi, size, gradient, gradient_size = found.log_value, found.size, found.gradient, found.gradient_size
-    else:
-        log_phi, size = model.log_cf_sized(z, tau)
+    found = sample(model, z, tau, kernels)
+    log_phi, size = found.log_phi, found.size
     log_scale = log_phi[:, 0].real.copy()
     log_phi -= log_scale[:, None]
     phi = np.exp(log_phi)
@@ -65,10 +60,10 @@ def line_sums(model: Model, tau: Floats, plan: Plan, rows: Ints, kernels: list[K
         if kernel.parameter is None:
             lost = np.einsum("ij,ij->i", modulus, size)
         else:
-            g = gradient[kernel.parameter]
+            g = found.gradient[kernel.parameter]
             g_modulus = np.abs(g)
             last[i] = g_modulus[:, -1]
-            lost = np.einsum("ij,ij->i", modulus, size * g_modulus + gradient_size[kernel.parameter])
+            lost = np.einsum("ij,ij->i", modulus, size * g_modulus + found.gradient_size[kernel.parameter])
             base *= g
             modulus *= g_modulus
         spread = (modulus @ inverse) / inverse[0]
