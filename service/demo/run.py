@@ -6,6 +6,7 @@ A step sends what it needs, adds to the story what later steps build on, and ret
 from __future__ import annotations
 
 import json
+import tempfile
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from importlib import resources
@@ -13,15 +14,17 @@ from typing import Any, Final
 
 import httpx
 
+from service.demo.fit import FitError, fit_chain
 from service.demo.make_chain import UNDERLYING
 from service.demo.server import running_server
 from service.demo.tables import number, table
+from service.jobs.pool import running_workers
+from service.jobs.store import wait_for_store
 from service.settings import Settings
 
 __all__ = ["DemoError", "run_demo"]
 
-# A guess by eye at the parameters behind the chain, so that model and quotes can be compared without a fit.
-_MODEL: Final = {"name": "heston", "v0": 0.03, "kappa": 2.0, "theta": 0.045, "sigma": 0.6, "rho": -0.7}
+_PATIENCE: Final = 60.0  # seconds for the workers to make their store
 _SHOWN: Final = 11  # strikes of a smile that are printed
 
 
@@ -36,6 +39,7 @@ class Story:
     client: httpx.Client
     chain: dict[str, Any]
     surface: dict[str, Any] = field(default_factory=dict)
+    model: dict[str, Any] = field(default_factory=dict)
     smile: dict[str, Any] = field(default_factory=dict)
 
     def post(self, path: str, body: dict[str, Any]) -> dict[str, Any]:
@@ -50,11 +54,22 @@ def run_demo() -> None:
     """Start a server, take every step, stop the server."""
     chain = json.loads(resources.files("service.demo").joinpath("chain.json").read_text(encoding="utf-8"))
     try:
-        with running_server(Settings(access_log=False)) as base, httpx.Client(base_url=base, timeout=60.0) as client:
-            print(f"A server runs at {base}; everything below went over HTTP.")
-            story = Story(client, chain)
-            for number_, (title, step) in enumerate(_STEPS, 1):
-                print(f"\n{number_}. {title}\n\n{step(story)}", flush=True)
+        with tempfile.TemporaryDirectory(prefix="smilewright-") as folder:
+            settings = Settings(access_log=False, log_level="error", data_dir=folder)
+            with (
+                running_workers(settings, settings.job_workers),
+                running_server(settings) as base,
+                httpx.Client(base_url=base, timeout=60.0) as client,
+            ):
+                print(f"A server runs at {base}; everything below went over HTTP.")
+                if not wait_for_store(settings, seconds=_PATIENCE):
+                    raise DemoError("the workers did not start")
+                story = Story(client, chain)
+                for number_, (title, step) in enumerate(_STEPS, 1):
+                    print(f"\n{number_}. {title}\n", flush=True)
+                    print(step(story), flush=True)
+    except FitError as error:
+        raise DemoError(str(error)) from error
     except (httpx.HTTPError, RuntimeError, OSError) as error:
         raise DemoError(f"the server could not be used: {error}") from error
     print("\nThese are model values of an invented market, not quotes or advice. smilewright serve keeps a server up.")
@@ -97,6 +112,12 @@ def _first(story: Story, flag: str) -> str:
     return "-"
 
 
+def _fit(story: Story) -> str:
+    fit = fit_chain(story.client, story.chain, UNDERLYING)
+    story.model = fit.model
+    return fit.text
+
+
 def _price_smile(story: Story) -> str:
     slices = [
         {
@@ -108,7 +129,7 @@ def _price_smile(story: Story) -> str:
         }
         for one in story.surface["expiries"]
     ]
-    story.smile = story.post("/v1/smiles", {"model": _MODEL, "slices": slices})
+    story.smile = story.post("/v1/smiles", {"model": story.model, "slices": slices})
     quoted, priced = story.surface["expiries"][3], story.smile["slices"][3]
     columns = zip(
         priced["strikes"],
@@ -125,10 +146,10 @@ def _price_smile(story: Story) -> str:
     ]
     step = max(1, len(rows) // _SHOWN)
     heads = ["strike", "payoff", "bid vol", "mid vol", "ask vol", "model vol", "model price", "error bound"]
-    parameters = ", ".join(f"{name} {value:g}" for name, value in list(_MODEL.items())[1:])
+    parameters = ", ".join(f"{name} {value:.4g}" for name, value in list(story.model.items())[1:])
     count = sum(len(one["strikes"]) for one in slices)
     return (
-        f"{count} strikes of {len(slices)} expiries in one request, Heston by a guess ({parameters}).\n"
+        f"{count} strikes of {len(slices)} expiries in one request, Heston as fitted:\n{parameters}.\n"
         f"Expiry {story.chain['expiries'][3]['expiry']}, every {_ordinal(step)} strike, "
         f"{priced['transform']['nodes']} transform nodes:\n\n{table(heads, rows[::step])}"
     )
@@ -159,6 +180,7 @@ def _find_vols(story: Story) -> str:
 _STEPS: Final[tuple[tuple[str, Callable[[Story], str]], ...]] = (
     ("Chain to forwards, discount factors and volatilities (POST /v1/chains)", _read_chain),
     ("What is wrong with which quote", _count_flags),
+    ("A model fitted, as a job with progress (POST /v1/calibrations)", _fit),
     ("Smiles with prices, volatilities and error bounds (POST /v1/smiles)", _price_smile),
     ("Prices to volatilities (POST /v1/implied-vols)", _find_vols),
 )

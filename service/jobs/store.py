@@ -27,7 +27,18 @@ from service.settings import Settings
 if TYPE_CHECKING:
     from dbos import DBOSClient, WorkflowStatus
 
-__all__ = ["APPLICATION", "JOBS", "JOB_WORKFLOW", "Job", "JobStore", "Place", "State", "StoreDown", "Submitted"]
+__all__ = [
+    "APPLICATION",
+    "JOBS",
+    "JOB_WORKFLOW",
+    "Job",
+    "JobStore",
+    "Place",
+    "State",
+    "StoreDown",
+    "Submitted",
+    "wait_for_store",
+]
 
 Place = tuple[int, int, str]
 State = Literal["queued", "running", "succeeded", "failed", "cancelled"]
@@ -250,6 +261,22 @@ class JobStore:
             lazy=True,
             retry_connection_errors=False,
         )
+
+
+def wait_for_store(settings: Settings, *, seconds: float) -> bool:
+    """Wait until a worker has made the store; whether it has."""
+    store = JobStore(settings)
+    end = time.monotonic() + seconds
+    try:
+        while True:
+            with contextlib.suppress(StoreDown):
+                store.find("", "", owner="")
+                return True
+            if time.monotonic() > end:
+                return False
+            time.sleep(0.05)
+    finally:
+        store.close()
 
 
 LOST: Final[dict[str, Any]] = {

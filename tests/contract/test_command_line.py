@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import re
+import shutil
 import signal
 import socket
 import subprocess
@@ -103,6 +104,10 @@ def test_demo_shows_the_whole_job(tmp_path: Path) -> None:
     text = done.stdout
     for words in ("/v1/chains", "/v1/smiles", "/v1/implied-vols", "Quillmark", "forward", "error bound", "not quotes"):
         assert words in text
+    assert "/v1/calibrations" in text and "] 9/9 surfaces" in text
+    report = Path(re.findall(r"report was saved: (.+)$", text, re.MULTILINE)[0])
+    assert report.read_text(encoding="utf-8").startswith("<!DOCTYPE html>")
+    shutil.rmtree(report.parent)
     for flag in ("crossed", "no_bid", "parity_outlier", "wide"):
         assert re.search(rf"^{flag} +[1-9]", text, re.MULTILINE), flag
     assert len(re.findall(r"^20\d\d-\d\d-\d\d +40/40 ", text, re.MULTILINE)) == 8
