@@ -319,6 +319,7 @@ class _Sum:
 
     def __init__(self, parts: list[Any]) -> None:
         self.parts = parts
+        self.mixed = any(isinstance(part, _GaussianJumps | _ExponentialJumps) for part in parts)
 
     def log_moment(self, w: Any, near: Any) -> tuple[Any, Any]:
         total, states = mpc(0), []

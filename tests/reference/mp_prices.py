@@ -283,9 +283,27 @@ def _contour_integral(
     p = _saddle(at, interval, k, payoff)
     if at.log_moment(mpc(p), None)[0].real - (p - payoff.shift) * k < -NEGLIGIBLE:
         return residue
-    angle, half = _angles(at, p, k)
-    angle = math.pi / 2 + lean * (angle - math.pi / 2)
-    half *= 0.9 if lean == 1.0 else 0.45
+    low, high = at.sector(p)
+    trials = [_angles(at, p, k)]
+    if lean != 1.0:
+        trials = [(math.pi / 2 + lean * (trials[0][0] - math.pi / 2), trials[0][1] / 2)]
+    elif getattr(at, "mixed", False):  # parts of unlike scales: what pulls far out need not be what pulls before that
+        trials += [((low + high) / 2, (high - low) / 2)]
+        trials += [
+            ((low + math.pi / 2) / 2, (math.pi / 2 - low) / 2),
+            ((high + math.pi / 2) / 2, (high - math.pi / 2) / 2),
+        ]
+    paths = [(_path(at, interval, p, angle, 0.9 * half, k, payoff), 0.9 * half) for angle, half in trials]
+    if len(paths) > 1:
+        peaks = [path.peak() for path, _ in paths]
+        tame = [i for i, peak in enumerate(peaks) if peak <= 1000 * min(peaks)]
+        paths = [paths[tame[0]]]
+    path, half = paths[0]
+    return path.integrate(2 * math.pi * half / (math.log(10) * 0.6 * digits), residue, digits)
+
+
+def _path(at: Any, interval: tuple[Any, Any], p: Any, angle: float, half: float, k: Any, payoff: _Payoff) -> _Hyperbola:
+    """The hyperbola through ``p`` with arms at ``angle``, as wide as the interval and the integrand's bend allow."""
     omega = math.pi / 2 - angle
     room = min(p - interval[0], interval[1] - p)
     step = room / 16
@@ -294,8 +312,7 @@ def _contour_integral(
     right = math.sin(omega + half) - math.sin(omega) if omega + half < math.pi / 2 else 1 - math.sin(omega)
     left = math.sin(omega) - math.sin(omega - half) if omega - half > -math.pi / 2 else 1 + math.sin(omega)
     scale = min(0.8 * (interval[1] - p) / right, 0.8 * (p - interval[0]) / left, 4 * width)
-    path = _Hyperbola(at, p, mpfr(scale), mpfr(omega), k, payoff)
-    return path.integrate(2 * math.pi * half / (math.log(10) * 0.6 * digits), residue, digits)
+    return _Hyperbola(at, p, mpfr(scale), mpfr(omega), k, payoff)
 
 
 class _Hyperbola:
@@ -315,6 +332,16 @@ class _Hyperbola:
         log_m, state = self.at.log_moment(w, near)
         value = gmpy2.exp(log_m - (w - self.payoff.shift) * self.k) / self.payoff.divisor(w)
         return (value * self.half * (grow + fall)).imag, state
+
+    def peak(self) -> Any:
+        """The largest term, on a coarse grid: how much is there to cancel."""
+        state, most = self.state, mpfr(0)
+        for j in range(1, 81):
+            value, state = self.term(mpfr(j) / 2, state)
+            if not gmpy2.is_finite(value):
+                return mpfr("inf")
+            most = max(most, abs(value))
+        return most
 
     def run(self, first: Any, step: Any, small: Any, end: Any) -> tuple[Any, Any]:
         """Sum of the terms at ``first, first + step, ...`` to ``end`` or, without one, until they have died out."""
@@ -343,7 +370,7 @@ class _Hyperbola:
             total += self.run(h / 2, h, small, end)[0]
             h /= 2
             finer = residue + total * h / pi
-            if abs(finer - value) <= abs(finer) * mpfr(10) ** -(0.6 * digits + 3):
+            if gmpy2.is_finite(finer) and abs(finer - value) <= abs(finer) * mpfr(10) ** -(0.6 * digits + 3):
                 return finer
             value = finer
         raise NotReached(f"no agreement to {digits} digits at k = {float(self.k)}")
