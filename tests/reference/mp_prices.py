@@ -324,6 +324,7 @@ class _Hyperbola:
         self.centre = p - scale * gmpy2.sin(omega)
         self.half = mpc(0, scale / 2)
         self.top, self.state = at.log_moment(mpc(p), None)
+        self.pause = 4 if getattr(at, "mixed", False) else 1  # jumps of nearly one size let the integrand come back
 
     def term(self, y: Any, near: Any) -> tuple[Any, Any]:
         grow = gmpy2.exp(y) * self.turn
@@ -352,7 +353,7 @@ class _Hyperbola:
             size = abs(value)
             biggest = max(biggest, size)
             quiet = quiet + 1 if size < small * biggest else 0
-            if (quiet > 8 and end is None) or (end is not None and y > end):
+            if (quiet > 8 and quiet * step > self.pause and end is None) or (end is not None and y > end):
                 return total, y
             y += step
         raise NotReached("the integrand does not die out")
