@@ -61,7 +61,7 @@ def _quantiles(cost: np.ndarray, median: float, found: list) -> Table:
     )
     for name, share in (("cheapest", 0.0), ("median", 0.5), ("90 %", 0.9), ("99 %", 0.99), ("dearest", 1.0)):
         spent = median if name == "median" else float(np.quantile(cost, share))
-        table.add(name, seconds(spent), ratio(spent, median), "20 x" if name == "dearest" else "")
+        table.add(name, seconds(spent), ratio(spent, median), "<= 20 x" if name == "dearest" else "")
     return table
 
 

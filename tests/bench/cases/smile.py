@@ -67,26 +67,30 @@ def _table(
     times: dict[str, float], errors: dict[str, tuple[float, float]], strikes: int, contours: str, few: int
 ) -> Table:
     goals = {
-        "engine, from nothing": "3 x floor",
-        "engine, plan known": "3 x floor",
-        "damped FFT, 4,096 points": "4 x",
-        "quad, its own tolerance": "500 x",
-        "quad, tolerance 1e-10": "500 x",
+        "engine, from nothing": "<= 3 x floor",
+        "engine, plan known": "<= 3 x floor",
+        "damped FFT, 4,096 points": ">= 4 x",
+        "quad, its own tolerance": ">= 500 x",
+        "quad, tolerance 1e-10": ">= 500 x",
     }
     table = Table(
         f"{strikes} strikes over +-5 standard deviations, one year, tolerance {TOLERANCE:g}",
-        ("", "time", "of floor", "of cold", "of plan known", "goal", "relative error", "absolute error"),
+        ("", "time", "of floor", "of the first", "of plan known", "goal", "relative error", "absolute error"),
         notes=[
             "parameters of Fang and Oosterlee 2008; errors: worst against 20 digits, absolute ones per unit forward",
             f"contours: {contours}",
             "from nothing: plan, rows and strikes; plan known: rows and strikes; rows kept: strikes; no implied vols",
+            "goals: of the floor for the engine, of the first row for the other ways",
             f"quad: two probabilities (Heston 1993), timed on {few} strikes and scaled; errors at those strikes",
             "damped FFT: Carr and Madan 1999, alpha 1.5, spacing 0.25, Simpson's weights, cubic spline",
         ],
     )
     floor, cold = times["floor: phi at the nodes and an FFT"], times["engine, from nothing"]
     known = times["engine, plan known"]
-    for name in sorted(times, key=lambda name: (not name.startswith("engine"), times[name])):
+    for name in sorted(
+        times,
+        key=lambda name: (not name.startswith("engine"), -times[name] if name.startswith("engine") else times[name]),
+    ):
         spent = times[name]
         relative, absolute = errors.get(name, (float("nan"), float("nan")))
         table.add(

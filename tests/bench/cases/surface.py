@@ -61,9 +61,9 @@ def tables(watch: Stopwatch) -> Iterable[Table]:
                 name,
                 seconds(times[name]),
                 ratio(times[name], times[f"one year, {kind}"]),
-                "6 x" if surface else "",
+                "<= 6 x" if surface else "",
                 ratio(times[name], times[floor]),
-                "1.5 x" if surface else "3 x",
+                "<= 1.5 x" if surface else "<= 3 x",
                 *map(error, errors),
             )
     yield table
