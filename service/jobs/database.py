@@ -15,11 +15,13 @@ from service.settings import Settings
 if TYPE_CHECKING:
     from sqlalchemy import Connection, Engine
 
-__all__ = ["IMPATIENT", "PATIENT", "BeatBook", "address", "job_folder", "open_engine", "where"]
+__all__ = ["IMPATIENT", "PATIENT", "READY", "BeatBook", "address", "job_folder", "open_engine", "where"]
 
 IMPATIENT: Final = 0.25
 PATIENT: Final = 30.0
 _SQLITE: Final = "sqlite:///"
+READY: Final = "ready"  # the row that is there once the store is made
+_FOR_EVER: Final = 1e18
 _FILE: Final = "jobs.sqlite"
 _CONNECT_SECONDS: Final = 2
 _STATEMENT_MILLISECONDS: Final = 2_000
@@ -101,6 +103,17 @@ class BeatBook:
         """Make the table where it is missing."""
         with self._engine.begin() as connection:
             self._run(connection, self._TABLE)
+
+    def call_ready(self) -> None:
+        """Say that the whole store is made, ours and the durable engine's."""
+        with self._engine.begin() as connection:
+            self._run(
+                connection,
+                "INSERT INTO smilewright_beats (name, holder, beat) VALUES (:ready, :ready, :for_ever) "
+                "ON CONFLICT (name) DO NOTHING",
+                ready=READY,
+                for_ever=_FOR_EVER,
+            )
 
     def beat(self, worker: str) -> None:
         """Say that a worker is alive."""

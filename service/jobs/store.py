@@ -21,7 +21,7 @@ from typing import TYPE_CHECKING, Any, Final, Literal
 import orjson
 
 from service.jobs.blobs import Blobs
-from service.jobs.database import IMPATIENT, job_folder, open_engine
+from service.jobs.database import IMPATIENT, READY, job_folder, open_engine
 from service.settings import Settings
 
 if TYPE_CHECKING:
@@ -54,7 +54,7 @@ _ROWS: Final[dict[State, tuple[str, ...]]] = {
     "cancelled": ("CANCELLED", "SUCCESS", "PENDING", "ENQUEUED", "DELAYED"),
 }
 _PAGE: Final = 200
-_TRY_READ: Final = "SELECT 1 FROM smilewright_beats LIMIT 1"
+_TRY_READ: Final = f"SELECT 1 FROM smilewright_beats WHERE name = '{READY}'"
 _TRY_WRITE: Final = "DELETE FROM smilewright_beats WHERE name = ''"
 
 
@@ -245,7 +245,10 @@ class JobStore:
             client = self._client
             assert client is not None
             with self._engine.begin() as connection:
-                connection.execute(sa.text(_TRY_WRITE if write else _TRY_READ))
+                if write:
+                    connection.execute(sa.text(_TRY_WRITE))
+                if connection.execute(sa.text(_TRY_READ)).first() is None:
+                    raise StoreDown("not made yet")
             yield client
         except (sa.exc.SQLAlchemyError, OSError) as error:
             raise StoreDown(type(error).__name__) from error

@@ -110,6 +110,7 @@ class _Worker:
         DBOS.launch()
         for queue, at_once in ((JOBS, _AT_ONCE), (STEPS, 2)):  # one step computes, the next is at hand
             DBOS.register_queue(queue, worker_concurrency=at_once, polling_interval_sec=_POLL_SECONDS)
+        self._beats.call_ready()
         return DBOS
 
     def _await_store(self) -> None:

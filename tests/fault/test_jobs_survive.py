@@ -1,5 +1,5 @@
-"""Processes killed and the store taken away while jobs run, on the embedded store: no job is lost, none is done twice
-over, and its result is that of an undisturbed run, byte for byte."""
+"""Processes killed and the store taken away while jobs run: no job is lost, none is done twice over, and its result is
+that of an undisturbed run, byte for byte. On the embedded store in the fast tests, on PostgreSQL under the marker."""
 
 from __future__ import annotations
 
@@ -9,24 +9,47 @@ import signal
 import sqlite3
 import time
 from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
 
 import httpx
 import orjson
 import pytest
+from sqlalchemy import text
 
+from service.jobs.database import PATIENT, open_engine
 from service.jobs.store import Job, JobStore
 from service.jobs.worker import SILENT_SECONDS
 from service.settings import Settings
+from tests.fault.postgres import Postgres
 from tests.fault.processes import await_, finished, price, ready, server, surfaces, workers
 from tests.fault.sleepers import COMMAND, expected
 
 ME = "me"
+AWAY = {"embedded": 2.0, "postgresql": 10.0}  # seconds that the store is away
+
+
+@pytest.fixture(scope="module")
+def postgres() -> Iterator[Postgres]:
+    server = Postgres()
+    yield server
+    server.close()
+
+
+@pytest.fixture(params=["embedded", pytest.param("postgresql", marks=pytest.mark.fault)])
+def place(request: pytest.FixtureRequest) -> str:
+    """Which store."""
+    return str(request.param)
 
 
 @pytest.fixture
-def settings(tmp_path: Path) -> Settings:
+def settings(place: str, tmp_path: Path, request: pytest.FixtureRequest) -> Settings:
+    found = {} if place == "embedded" else {"job_store": request.getfixturevalue("postgres").database()}
+    return Settings(data_dir=str(tmp_path), job_workers=2, access_log=False, **found)
+
+
+@pytest.fixture
+def embedded(tmp_path: Path) -> Settings:
     return Settings(data_dir=str(tmp_path), job_workers=2, access_log=False)
 
 
@@ -107,13 +130,14 @@ def test_the_server_killed_right_after_it_accepted(settings: Settings, store: Jo
 
 def _beating(settings: Settings) -> list[str]:
     """Workers that have not left in good order."""
-    with sqlite3.connect(Path(settings.data_dir) / "jobs.sqlite") as base:
-        rows = base.execute("SELECT name FROM smilewright_beats").fetchall()
-    base.close()
+    engine = open_engine(settings, patience=PATIENT)
+    with engine.connect() as connection:
+        rows = connection.execute(text("SELECT name FROM smilewright_beats WHERE name <> 'ready'")).fetchall()
+    engine.dispose()
     return [name for (name,) in rows]
 
 
-def test_the_store_taken_away(settings: Settings, store: JobStore) -> None:
+def test_the_store_taken_away(place: str, settings: Settings, store: JobStore, request: pytest.FixtureRequest) -> None:
     """Submissions are refused at once and say when to come back, pricing notices nothing, the running job is finished,
     and what was refused does not appear later."""
     with server(settings) as (_process, base):
@@ -123,16 +147,17 @@ def test_the_store_taken_away(settings: Settings, store: JobStore) -> None:
             f"{base}/v1/calibrations", content=surfaces(60), headers=headers | {"Idempotency-Key": "one"}
         )
         assert first.status_code == 202
-        with _locked(settings):
-            for _ in range(3):
+        with _locked(settings) if place == "embedded" else _stopped(request.getfixturevalue("postgres")):
+            end = time.monotonic() + AWAY[place]
+            while time.monotonic() < end:
                 refused = httpx.post(f"{base}/v1/calibrations", content=surfaces(3), headers=headers, timeout=60.0)
                 assert refused.status_code == 503, refused.text
                 assert refused.json()["type"] == "/problems/jobs-unavailable"
                 assert int(refused.headers["Retry-After"]) >= 1
                 assert price(base) == 200
-        page = httpx.get(f"{base}/v1/calibrations").json()["jobs"]
-        assert [one["id"] for one in page] == [first.json()["id"]]
         again = await_(lambda: _accepted(base, headers))
+        page = httpx.get(f"{base}/v1/calibrations").json()["jobs"]
+        assert [one["id"] for one in page] == [again, first.json()["id"]]
         for job in (first.json()["id"], again):
             await_(lambda job=job: store.blobs.has(job, "outcome.json"))
             ended = httpx.get(f"{base}/v1/calibrations/{job}").json()
@@ -144,19 +169,21 @@ def _accepted(base: str, headers: dict[str, str]) -> str | None:
     return str(answer.json()["id"]) if answer.status_code in (200, 202) else None
 
 
-def _locked(settings: Settings) -> Any:
-    """The store, locked for everybody else who writes while the context lasts."""
+@contextmanager
+def _locked(settings: Settings) -> Iterator[None]:
+    """The embedded store, locked for everybody else who writes."""
+    base = sqlite3.connect(Path(settings.data_dir) / "jobs.sqlite", isolation_level=None, timeout=30.0)
+    base.execute("BEGIN EXCLUSIVE")
+    yield
+    base.execute("ROLLBACK")
+    base.close()
 
-    class Lock:
-        def __enter__(self) -> None:
-            self.base = sqlite3.connect(Path(settings.data_dir) / "jobs.sqlite", isolation_level=None, timeout=30.0)
-            self.base.execute("BEGIN EXCLUSIVE")
 
-        def __exit__(self, *_: object) -> None:
-            self.base.execute("ROLLBACK")
-            self.base.close()
-
-    return Lock()
+@contextmanager
+def _stopped(server: Postgres) -> Iterator[None]:
+    server.stop()
+    yield
+    server.start()
 
 
 def test_a_running_job_of_500_surfaces_is_cancelled(settings: Settings, store: JobStore) -> None:
@@ -239,18 +266,20 @@ def test_old_jobs_are_forgotten(tmp_path: Path) -> None:
     store.close()
 
 
-def test_nothing_that_was_kept_can_run_code(settings: Settings, store: JobStore) -> None:
+def test_nothing_that_was_kept_can_run_code(embedded: Settings) -> None:
     """The store holds JSON: a value that unpickles would let whoever writes to the store run code in a worker."""
-    with workers(settings, 1, COMMAND):
+    store = JobStore(embedded)
+    with workers(embedded, 1, COMMAND):
         await_(lambda: ready(store))
         finished(store, sleepers(store, 4, 0.0))
-        path = Path(settings.data_dir) / "jobs.sqlite"
+        store.close()
+        path = Path(embedded.data_dir) / "jobs.sqlite"
         with sqlite3.connect(path) as base:
             forms = {form for (form,) in base.execute("SELECT serialization FROM workflow_status")}
-            kept = [text for (text,) in base.execute("SELECT inputs FROM workflow_input")]
-            kept += [text for (text,) in base.execute("SELECT output FROM operation_outputs") if text]
+            kept = [value for (value,) in base.execute("SELECT inputs FROM workflow_input")]
+            kept += [value for (value,) in base.execute("SELECT output FROM operation_outputs") if value]
         base.close()
     assert forms == {"portable_json"} and len(kept) >= 3
-    for text in kept:
-        json.loads(text)
+    for value in kept:
+        json.loads(value)
     assert os.stat(path).st_mode & 0o077 == 0, "others on this machine can read the store"
