@@ -136,8 +136,8 @@ class Kou(Columns):
         return np.asarray(self.log_moment(p, tau) - tau * (diffusion + self.jump_intensity * (up_fall + down_fall)))
 
     def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
-        """The poles of the jump transform, at any ``tau``: ``(-down_rate, up_rate)``; where nothing jumps to a side,
-        no more is claimed."""
+        """The poles of the jump transform, at any ``tau``: ``(-down_rate, up_rate)``. Where nothing jumps to a
+        side no more is claimed: the derivatives by intensity and share keep their pole there."""
         shape = np.broadcast_shapes(np.shape(self.up_rate), np.shape(tau))
         inside = 1.0 - 4e-15
         low, high = -self.down_rate * inside, 1.0 + (self.up_rate - 1.0) * inside
