@@ -25,7 +25,6 @@ from engine.calibration.doubts import Doubts, warnings_of
 from engine.calibration.losses import Loss
 from engine.calibration.objective import Evaluation, Objective
 from engine.calibration.records import CalibratedSlice, Calibration, CalibrationSettings, CalibrationSlice
-from engine.protocols import Model
 from engine.slices import Slice
 from engine.smile import price_smiles
 from engine.status import Payoff
@@ -70,7 +69,7 @@ def report(
     parameters = coordinates.by_name(fitted.at.x)
     errors = _errors(objective, fitted)
     at_bound = [coordinates.names[i] for i, held in zip(coordinates.free, fitted.held, strict=True) if held]
-    columns = _columns(slices, model_from(objective.kind, parameters), quotes.used, settings.tolerance)
+    columns = _columns(slices, objective, fitted)
     difference = fitted.at.vols - quotes.vols
     price = (fitted.at.value - quotes.value) * quotes.money
     ratio = feller_ratio(parameters)
@@ -90,7 +89,7 @@ def report(
         max_abs_error_vol=float(np.max(np.abs(difference))),
         within_spread=_within_spread(slices, columns),
         iterations=fitted.iterations,
-        evaluations=objective.evaluations + 1,
+        evaluations=objective.evaluations,
         slices=columns,
         warnings=_warnings(objective, settings, errors, status, parameters, at_bound, costs),
     )
@@ -169,24 +168,24 @@ def _covariance(rows: Floats, prior: Floats, loss: Loss, residuals: Floats, free
     return inverse @ (rows.T @ rows) @ inverse * variance, unknown
 
 
-def _columns(
-    slices: Sequence[CalibrationSlice], model: Model, used: list[np.ndarray], tolerance: float
-) -> list[CalibratedSlice]:
-    """Model volatilities at every strike sent, used or not."""
-    otm = int(Payoff.OTM)
-    priced = price_smiles(
-        model,
-        [
-            Slice(one.expiry, one.forward, one.discount_factor, one.strikes, np.full(one.strikes.shape, otm, np.uint8))
-            for one in slices
-        ],
-        tolerance=tolerance,
-    )
+def _columns(slices: Sequence[CalibrationSlice], objective: Objective, fitted: Fitted) -> list[CalibratedSlice]:
+    """Model volatilities at every strike sent, used or not; the latter cost one more evaluation."""
+    used = objective.quotes.used
+    if all(mask.all() for mask in used):
+        ends = np.cumsum([mask.size for mask in used])
+        model_vols = np.split(fitted.at.vols, ends[:-1])
+    else:
+        model = model_from(objective.kind, objective.coordinates.by_name(fitted.at.x))
+        otm = [np.full(one.strikes.shape, int(Payoff.OTM), dtype=np.uint8) for one in slices]
+        whole = [
+            Slice(one.expiry, one.forward, one.discount_factor, one.strikes, payoffs)
+            for one, payoffs in zip(slices, otm, strict=True)
+        ]
+        objective.evaluations += 1
+        model_vols = [one.implied_vols for one in price_smiles(model, whole, tolerance=objective.settings.tolerance)]
     return [
-        CalibratedSlice(
-            one.expiry, one.strikes, one.vols, found.implied_vols, found.implied_vols - one.vols, mask.copy()
-        )
-        for one, found, mask in zip(slices, priced, used, strict=True)
+        CalibratedSlice(one.expiry, one.strikes, one.vols, vols, vols - one.vols, mask.copy())
+        for one, vols, mask in zip(slices, model_vols, used, strict=True)
     ]
 
 

@@ -42,8 +42,8 @@ _SETTLED = 0.9  # of the last scale
 _LEVEL = 1e-7  # of the cost, across the whole room of a coordinate
 _TRIED = 2  # of the starts of models with jumps, those that begin nearest
 _PERFECT = 1e-20  # cost (1e-12 in volatility) at which further starts cannot matter
-_APPROACH = {"ftol": 1e-5, "xtol": 1e-5, "gtol": 1e-10}
-_SETTLE = {"ftol": 1e-12, "xtol": 1e-10, "gtol": 1e-12}
+_APPROACH = {"ftol": 1e-3, "xtol": 1e-4, "gtol": 1e-10}
+_SETTLE = {"ftol": 1e-9, "xtol": 1e-8, "gtol": 1e-12}
 
 
 @dataclass(frozen=True, slots=True)

@@ -15,8 +15,9 @@ with the unit 1 for a correlation and 0.01 for the rest, where a prior of zero h
 
 Accuracy. The prices of an evaluation are asked for with the relative tolerance ``0.1 r^2``, ``r`` being the smallest
 root-mean-square error relative to the volatilities so far: pricing errors stay below the square of what is left to be
-fitted, which is what a Gauss-Newton step leaves in its turn. ``tighten`` ends that and fixes the tolerance, so that
-the last steps are taken, and the fit is judged, on prices whose error is far below the residuals.
+fitted, which is what a Gauss-Newton step leaves in its turn. ``tighten`` ends that and fixes the tolerance at ``1e-9
+r``, at most 1e-10 and not below the one of the settings: the last steps are taken, and the fit is judged, on prices
+whose error is far below the residuals, so that the two cannot cancel.
 
 Where a trial cannot be valued (no forward exists, too many nodes, a price below the double range) its residuals are
 infinite, from which the optimiser steps back.
@@ -24,7 +25,7 @@ infinite, from which the optimiser steps back.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -44,6 +45,7 @@ __all__ = ["LOOSEST", "Evaluation", "Objective"]
 
 LOOSEST = 1e-6
 _QUADRATIC = 0.1
+_FAR_BELOW, _LAST = 1e-9, 1e-10
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,7 +76,8 @@ class Objective:
         self._adapts = True
         self._best = np.inf
         self._last: Evaluation | None = None
-        self._kernels = [VANILLA] + [VANILLA.by(i) for i in range(len(coordinates.names))]
+        # planned like the value (no growth); the bounds, which that makes worthless for the derivatives, are not read
+        self._kernels = [VANILLA] + [replace(VANILLA, parameter=i) for i in range(len(coordinates.names))]
         self._prior = _prior_rows(coordinates, settings)
 
     @property
@@ -87,8 +90,11 @@ class Objective:
         self._adapts, self._best, self.tolerance, self._last = True, np.inf, LOOSEST, None
 
     def tighten(self) -> None:
-        """From now on every evaluation is made with the tolerance of the settings."""
-        self._adapts, self.tolerance, self._last = False, self.settings.tolerance, None
+        """From now on every evaluation is made with one tolerance, far below the residuals."""
+        far_below = float(
+            np.clip(_FAR_BELOW * self._best, self.settings.tolerance, max(_LAST, self.settings.tolerance))
+        )
+        self._adapts, self.tolerance, self._last = False, far_below, None
 
     def at(self, x: Floats) -> Evaluation:
         """Values and Jacobian at ``x`` (q,); the last point is kept."""

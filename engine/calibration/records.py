@@ -60,8 +60,8 @@ class CalibrationSettings:
 
     ``bounds`` replace the room usually searched (``engine.calibration.coordinates``), ``fixed`` parameters are not
     fitted, ``start`` replaces the automatic start where it names a parameter. ``starts`` > 1 adds random starts from
-    ``seed``; the best fit is kept. ``tolerance``: of the prices in the last iterations, relative to the
-    out-of-the-money value. ``max_evaluations``: surface evaluations
+    ``seed``; the best fit is kept. ``tolerance``: the tightest asked of prices, relative to the
+    out-of-the-money value; where residuals are large, 1e-9 of them is enough. ``max_evaluations``: surface evaluations
     allowed to each descent: every start, and the last stage.
     """
 

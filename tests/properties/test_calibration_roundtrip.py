@@ -83,17 +83,18 @@ def test_hundred_heston_surfaces():
 
 
 @pytest.mark.long
-def test_hundred_bates_surfaces():
-    """At least 90 of 100; the misses are printed."""
+@pytest.mark.parametrize("block", range(4))
+def test_hundred_bates_surfaces(block):
+    """At least 23 of every 25, hence 92 of 100; the misses are printed."""
     missed = []
-    for draw in range(100):
+    for draw in range(25 * block, 25 * (block + 1)):
         rng = np.random.default_rng([SEED, 1000 + draw])
         values = {**heston_draw(rng), **jump_draw(rng)}
         fit, _ = _fit("bates", values)
         if not fit.rmse_vol < 1e-6:
             missed.append((draw, values, fit.rmse_vol, fit.status))
-    print(f"\nBates: {100 - len(missed)} of 100", *missed, sep="\n")
-    assert len(missed) <= 10
+    print(f"\nBates, draws from {25 * block}: {25 - len(missed)} of 25", *missed, sep="\n")
+    assert len(missed) <= 2
 
 
 def _noisy_fits(draws, expiries, strikes, **settings):
