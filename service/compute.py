@@ -15,6 +15,7 @@ from time import perf_counter
 from typing import TypeVar
 
 from engine import RefusedError
+from service.joint import Joint, JointCalls, Outcome
 from service.problems import Problem, over_limit
 from service.settings import Settings
 
@@ -24,27 +25,21 @@ Result = TypeVar("Result")
 
 
 @dataclass(frozen=True, slots=True)
-class Outcome:
-    """The encoded answer, and what it took: transform nodes (0 where there was no transform)."""
-
-    body: bytes
-    nodes: int = 0
-
-
-@dataclass(frozen=True, slots=True)
 class Task:
     """A request ready to be computed. ``work(node_limit)`` gives the outcome or raises; it touches nothing shared.
-    ``strikes`` and ``slices`` say how large it is; ``light`` is false for work whose size they do not tell."""
+    ``strikes`` and ``slices`` say how large it is; ``light`` is false for work whose size they do not tell; ``joint``
+    is how it is computed together with others."""
 
     work: Callable[[int], Outcome]
     strikes: int
     slices: int
     light: bool = True
+    joint: Joint | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class Done:
-    """An outcome, the strikes it was for, and the seconds it took once it had begun."""
+    """An outcome, the strikes it was for, and the seconds it took once it had begun (its share of a joint call)."""
 
     outcome: Outcome
     strikes: int
@@ -57,6 +52,7 @@ class Compute:
     def __init__(self, settings: Settings) -> None:
         self._settings = settings
         self._pool = ThreadPoolExecutor(settings.compute_threads, thread_name_prefix="compute")
+        self._joint = JointCalls(strikes=2 * settings.inline_strikes, node_limit=settings.inline_nodes)
         self._held = 0
         self._open = True
 
@@ -76,9 +72,13 @@ class Compute:
         return self._open and self._held < self.capacity
 
     async def run(self, task: Task) -> Done:
-        """Compute a task, here if it is small."""
+        """Compute a task, here if it is small, and then together with others that are."""
         limits = self._settings
         if task.light and task.strikes <= limits.inline_strikes and task.slices <= limits.inline_slices:
+            if task.joint is not None:
+                share = await self._joint.computed(task.joint)
+                if share is not None:
+                    return Done(share.outcome, task.strikes, share.seconds)
             try:
                 return _timed(task, limits.inline_nodes)
             except RefusedError:

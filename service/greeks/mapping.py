@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any, Final, TypeAlias
 
 import numpy as np
@@ -12,8 +14,9 @@ from service.compute import Outcome, Task
 from service.encoding import encode
 from service.greeks.definitions import definitions
 from service.greeks.schemas import GreeksAsked
+from service.joint import Joint
 from service.settings import Settings
-from service.terms.pricing import prepare, slice_answer
+from service.terms.pricing import Prepared, models_and_slices, prepare, slice_answer
 
 __all__ = ["plan"]
 
@@ -23,34 +26,53 @@ _OK, _NO_VOL, _NO_BOUND = range(3)
 _WORDS: Final = ("ok", "no_implied_vol", "no_bound")
 
 
+@dataclass(frozen=True, slots=True)
+class _Part:
+    asked: GreeksAsked
+    ready: Prepared
+
+
 def plan(asked: GreeksAsked, settings: Settings) -> Task:
     """The task of one request; raises Problem for sizes over a limit and terms that do not fit together."""
-    ready = prepare(asked, settings)
+    part = _Part(asked, prepare(asked, settings))
+    key = ("greeks", asked.tolerance, tuple(asked.greeks), asked.sensitivities)
+    return Task(
+        lambda node_limit: _price([part], node_limit)[0],
+        part.ready.strikes,
+        len(part.ready.slices),
+        joint=Joint(key, part, part.ready.strikes, _price),
+    )
 
-    def work(node_limit: int) -> Outcome:
-        found = price_greeks(
-            ready.model,
-            ready.slices,
+
+def _price(parts: Sequence[_Part], node_limit: int) -> list[Outcome]:
+    """Answers to requests of one tolerance and the same Greeks, in one call of the engine."""
+    asked = parts[0].asked
+    models, slices = models_and_slices([part.ready for part in parts])
+    found = iter(
+        price_greeks(
+            models,
+            slices,
             greeks=asked.greeks,
             sensitivities=asked.sensitivities,
             tolerance=asked.tolerance,
             node_limit=node_limit,
         )
-        slices = []
-        for terms, sent, one in zip(ready.terms, asked.slices, found, strict=True):
-            answer = slice_answer(terms, sent, one.priced, asked.outputs)
-            _add_greeks(answer, one, bounds="error_bound" in asked.outputs, sensitivities=asked.sensitivities)
-            slices.append(answer)
-        told = definitions(
-            asked.model.name,
-            tuple(found[0].greeks),
-            sensitivities=asked.sensitivities,
-            base=found[0].with_respect_to,
-        )
-        nodes = sum(one.priced.transform.nodes for one in found)
-        return Outcome(encode({"slices": slices, "definitions": told, "warnings": ready.warnings}), nodes)
+    )
+    return [_answer(part, [next(found) for _ in part.ready.slices]) for part in parts]
 
-    return Task(work, ready.strikes, len(ready.slices))
+
+def _answer(part: _Part, found: list[GreekSlice]) -> Outcome:
+    asked, ready = part.asked, part.ready
+    slices = []
+    for terms, sent, one in zip(ready.terms, asked.slices, found, strict=True):
+        answer = slice_answer(terms, sent, one.priced, asked.outputs)
+        _add_greeks(answer, one, bounds="error_bound" in asked.outputs, sensitivities=asked.sensitivities)
+        slices.append(answer)
+    told = definitions(
+        asked.model.name, tuple(found[0].greeks), sensitivities=asked.sensitivities, base=found[0].with_respect_to
+    )
+    nodes = sum(one.priced.transform.nodes for one in found)
+    return Outcome(encode({"slices": slices, "definitions": told, "warnings": ready.warnings}), nodes)
 
 
 def _add_greeks(answer: dict[str, Any], found: GreekSlice, *, bounds: bool, sensitivities: bool) -> None:

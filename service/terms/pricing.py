@@ -15,7 +15,7 @@ from service.terms.models import engine_model
 from service.terms.plausibility import warnings_of
 from service.terms.pricing_schemas import PricingAsked, SmileSliceAsked
 
-__all__ = ["Prepared", "prepare", "slice_answer"]
+__all__ = ["Prepared", "models_and_slices", "prepare", "slice_answer"]
 
 _STATUS_WORDS: Final = {int(status): status.word for status in Status}
 _PAYOFF_WORDS: Final = {int(payoff): payoff.word for payoff in Payoff}
@@ -51,6 +51,14 @@ def prepare(asked: PricingAsked, settings: Settings) -> Prepared:
         market=asked.market, model=asked.model, slices=terms, strikes=[one.strikes for one in asked.slices]
     )
     return Prepared(engine_model(asked.model), slices, terms, warnings, strikes)
+
+
+def models_and_slices(requests: Sequence[Prepared]) -> tuple[Model | list[Model], list[Slice]]:
+    """Arguments of one call of the engine for several requests: one model, or one a slice, and all slices in order."""
+    if len(requests) == 1:
+        return requests[0].model, requests[0].slices
+    models = [one.model for one in requests for _ in one.slices]
+    return models, [part for one in requests for part in one.slices]
 
 
 def slice_answer(
