@@ -36,7 +36,8 @@ def kernels_for(
     if "theta" in greeks:
         parameters.add(len(names))
     for index in sorted(parameters):
-        out += ([VANILLA.by(index)] if vanilla else []) + ([DIGITAL.by(index)] if digital else [])
+        growth = kind.gradient_growth
+        out += ([VANILLA.by(index, growth)] if vanilla else []) + ([DIGITAL.by(index, growth)] if digital else [])
     return out
 
 
@@ -74,7 +75,9 @@ class KernelTable:
 
     def by_parameter(self, index: int, *, digital: bool) -> tuple[Floats, Floats]:
         """``d c / d parameter`` or ``d P(X > k) / d parameter``."""
-        return self._row((DIGITAL if digital else VANILLA).by(index))
+        base = DIGITAL if digital else VANILLA
+        i = next(i for i, k in enumerate(self.kernels) if k.name == base.name and k.parameter == index)
+        return self.value[i], self.bound[i]
 
 
 @dataclass(frozen=True, slots=True)

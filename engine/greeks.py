@@ -273,7 +273,10 @@ def _by_parameter(t: _Terms, index: int) -> _Column:
 def _theta(group: Group, t: _Terms, by_forward: _Column) -> _Column:
     rate = -np.log(t.discount) / t.tau
     by_tau = _by_parameter(t, len(group.model.sensitivity_names))
-    return _sum((t.price, rate), (by_forward, -t.carry * t.forward), (by_tau, -1.0))
+    found = _sum((t.price, rate), (by_forward, -t.carry * t.forward), (by_tau, -1.0))
+    # the rates are quotients of logarithms by tau: rounding of the discount factor and of the forward is divided by it
+    rates = 4.0 * _EPS / t.tau * (np.abs(t.price.value) + np.abs(by_forward.value * t.forward))
+    return _Column(found.value, found.bound + rates)
 
 
 def _minimum_variance(group: Group, t: _Terms, by_forward: _Column) -> _Column:

@@ -61,6 +61,8 @@ class Model(Protocol):
     source: ClassVar[str]
     parameters: ClassVar[tuple[ParameterSpec, ...]]
     sensitivity_names: ClassVar[tuple[str, ...]]
+    gradient_growth: ClassVar[int]
+    """No ``d log phi / d parameter`` grows faster than ``|z|`` to this power along a line, 1 or 2."""
 
     @classmethod
     def stack(cls, models: Sequence[Self]) -> Self:

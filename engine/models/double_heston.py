@@ -41,6 +41,8 @@ class DoubleHeston:
         f"factors.{i}.{spec.name}" for i in (0, 1) for spec in HESTON_PARAMETERS
     )
 
+    gradient_growth: ClassVar[int] = 2
+
     @classmethod
     def stack(cls, models: Sequence[Self]) -> Self:
         """One object with stacked factors."""

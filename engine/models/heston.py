@@ -116,7 +116,7 @@ class Heston(Columns):
     def log_cf_sized(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> tuple[Complexes, Floats]:
         """``log_cf`` and the cap on its absolute rounding error in units of machine epsilon."""
         exponent = self._exponent(1j * z, tau, along_path, True)
-        return exponent.log_value, 4.0 * np.asarray(exponent.size)
+        return exponent.log_value, 8.0 * np.asarray(exponent.size)
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)]`` for real ``p`` inside the strip."""

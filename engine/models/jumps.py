@@ -41,35 +41,42 @@ class JumpExponent:
 
 def jump_exponent(w: Any, tau: Any, *, intensity: Any, mean: Any, stdev: Any, gradient: bool = False) -> JumpExponent:
     """Lognormal jumps at complex ``w``; parameters broadcast."""
-    a = w * (mean + (0.5 * stdev * stdev) * w)
-    less_one = _expm1(a)
-    compensator = np.expm1(mean + 0.5 * stdev * stdev)
-    shape = less_one - w * compensator
-    rate = intensity * tau
-    jump = 1.0 + less_one
-    modulus = np.abs(jump)
-    size = modulus * (1.0 + np.abs(a)) + np.abs(less_one) + np.abs(w) * (np.abs(compensator) + 1e-300)
-    if not gradient:
-        return JumpExponent(rate * shape, rate * size)
-    slope = w * (jump - (1.0 + compensator))
-    bend = stdev * w * (w * jump - (1.0 + compensator))
-    scale = np.abs(w) * (modulus * (1.0 + np.abs(a)) + 1.0 + compensator)
-    return JumpExponent(
-        rate * shape,
-        rate * size,
-        np.stack(np.broadcast_arrays(tau * shape, rate * slope, rate * bend, intensity * shape)),
-        np.stack(
-            np.broadcast_arrays(tau * size, rate * scale, rate * stdev * (1.0 + np.abs(w)) * scale, intensity * size)
-        ),
-    )
+    off = np.asarray(intensity) == 0.0
+    if off.any() and not gradient:  # 0 times what a huge jump would do is 0
+        mean, stdev = np.where(off, 0.0, mean), np.where(off, 0.0, stdev)
+    with np.errstate(over="ignore", invalid="ignore"):  # exp(lambda exp(...)) may leave the double range
+        a = w * (mean + (0.5 * stdev * stdev) * w)
+        less_one = _expm1(a)
+        compensator = np.expm1(mean + 0.5 * stdev * stdev)
+        shape = less_one - w * compensator
+        rate = intensity * tau
+        jump = 1.0 + less_one
+        modulus = np.abs(jump)
+        size = modulus * (1.0 + np.abs(a)) + np.abs(less_one) + np.abs(w) * (np.abs(compensator) + 1e-300)
+        if not gradient:
+            return JumpExponent(rate * shape, rate * size)
+        slope = w * (jump - (1.0 + compensator))
+        bend = stdev * w * (w * jump - (1.0 + compensator))
+        scale = np.abs(w) * (modulus * (1.0 + np.abs(a)) + 1.0 + compensator)
+        return JumpExponent(
+            rate * shape,
+            rate * size,
+            np.stack(np.broadcast_arrays(tau * shape, rate * slope, rate * bend, intensity * shape)),
+            np.stack(
+                np.broadcast_arrays(
+                    tau * size, rate * scale, rate * stdev * (1.0 + np.abs(w)) * scale, intensity * size
+                )
+            ),
+        )
 
 
 def jump_envelope(p: Any, u: Any, tau: Any, *, intensity: Any, mean: Any, stdev: Any) -> Floats:
     """Envelope of the real part of the exponent on ``z = u - i p``, non-increasing in ``u``."""
     square = stdev * stdev
-    with np.errstate(over="ignore"):
+    with np.errstate(over="ignore", invalid="ignore"):
         jump = np.exp(mean * p + 0.5 * square * (p * p - u * u))
-    return np.asarray(intensity * tau * (jump - 1.0 - p * np.expm1(mean + 0.5 * square)))
+        found = intensity * tau * (jump - 1.0 - p * np.expm1(mean + 0.5 * square))
+    return np.where(intensity > 0.0, found, 0.0)
 
 
 def jump_variance(tau: Any, *, intensity: Any, mean: Any, stdev: Any) -> Any:
@@ -83,7 +90,7 @@ def _expm1(a: Any) -> Any:
         growth = np.expm1(a.real)
         half = 0.5 * a.imag
         sine = np.sin(half)
-        twice = (2.0 + 2.0 * growth) * sine
+        twice = np.where(sine == 0.0, 0.0, (2.0 + 2.0 * growth) * sine)
         out = np.empty_like(a)
         out.real = growth - twice * sine
         out.imag = twice * np.cos(half)

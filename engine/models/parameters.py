@@ -30,6 +30,7 @@ class Columns:
 
     __slots__ = ()
     parameters: ClassVar[tuple[ParameterSpec, ...]]
+    gradient_growth: ClassVar[int] = 2
 
     @classmethod
     def _names(cls) -> list[str]:

@@ -30,6 +30,7 @@ from engine.protocols import CfGradient, ParameterSpec
 
 __all__ = ["VarianceGamma"]
 
+_EPS = float(np.finfo(np.float64).eps)
 _LEAST_MARGIN = 1e-6  # of 1 - theta nu - sigma^2 nu / 2: nearer to 0 the forward all but diverges
 
 
@@ -50,6 +51,7 @@ class VarianceGamma(Columns):
         ParameterSpec("nu", "years", 1e-4, 20.0, "Variance rate of the gamma clock."),
     )
     sensitivity_names: ClassVar[tuple[str, ...]] = ("sigma", "theta", "nu")
+    gradient_growth: ClassVar[int] = 1  # logarithms, and the drift's |z|
 
     def check(self) -> None:
         """Raise InputError for a parameter outside its range or a forward that does not exist."""
@@ -91,8 +93,15 @@ class VarianceGamma(Columns):
         rate = tau / self.nu
         drift = w * (rate * np.log1p(self._m))
         gamma = rate * log1p(x, one_x, False)
-        size = np.abs(drift) + np.abs(gamma) + rate * np.abs(x) / np.abs(one_x)
+        low, high = self._roots()
+        near_edge = np.abs(w / (high - w)) + np.abs(w / (low - w))  # what rounding of a root does to its logarithm
+        size = np.abs(drift) + np.abs(gamma) + rate * (near_edge + np.abs(w) * self._forward_condition)
         return drift - gamma, 4.0 * size
+
+    @property
+    def _forward_condition(self) -> Any:
+        """``|m| / (1 + m)``: what rounding of ``m`` does to ``log(1 + m)``."""
+        return np.abs(self._m) / (1.0 + self._m)
 
     def log_cf_gradient(self, z: Complexes, tau: Floats | float, *, along_path: bool = False) -> CfGradient:
         """``log_cf_sized`` and the derivatives by sigma, theta, nu and tau."""
@@ -107,22 +116,25 @@ class VarianceGamma(Columns):
         gradient[0] = (self.sigma * tau) * w * (w * near - 1.0 / margin)
         gradient[1] = tau * w * (near - 1.0 / margin)
         scale = tau / (self.nu * self.nu)
-        h_x, h_m = _h(x, one_x), np.real(_h(self._m + 0j, margin + 0j))
+        h_x, h_m = _h(x, one_x), np.real(_h(np.asarray(self._m + 0j), np.asarray(margin + 0j)))
         gradient[2] = scale * (h_x - w * h_m)
         gradient[3] = value / tau
-        modulus = tau * np.abs(w) * (np.abs(near) * (1.0 + np.abs(x) * np.abs(near)) + 1.0 / margin)
+        near_edge = 1.0 + np.abs(x) * np.abs(near)
+        modulus = tau * np.abs(w) * (np.abs(near) * near_edge + (1.0 + self._forward_condition) / margin)
         sizes[0] = self.sigma * (1.0 + np.abs(w)) * modulus
         sizes[1] = modulus
-        sizes[2] = scale * (np.abs(h_x) * (4.0 + np.abs(x * near)) + np.abs(w * h_m) * (4.0 + 1.0 / margin))
+        sizes[2] = scale * (
+            np.abs(h_x) * (4.0 + np.abs(x * near)) + np.abs(w * h_m) * (4.0 + self._forward_condition / margin)
+        )
         sizes[3] = 0.25 * size / tau
         return CfGradient(value, size, gradient, 16.0 * sizes)
 
     def log_moment(self, p: Floats, tau: Floats | float) -> Floats:
         """``log E[exp(p X)]`` for real ``p`` inside the strip."""
-        return self.log_envelope(p, np.zeros(()), tau)
+        return np.asarray(self.log_cf(np.asarray(-1j * p, dtype=np.complex128), tau).real)
 
     def log_envelope(self, p: Floats, u: Floats, tau: Floats | float) -> Floats:
-        """``log |phi(u - i p)|`` exactly."""
+        """``log |phi(u - i p)|``, with room for its own rounding."""
         low, high = self._roots()
         rate = tau / self.nu
         x = -self.nu * p * (self.theta + 0.5 * self.sigma * self.sigma * p)
@@ -130,14 +142,16 @@ class VarianceGamma(Columns):
             np.abs(x) < 0.5, np.log1p(np.where(np.abs(x) < 0.5, x, 0.0)), np.log1p(-p / high) + np.log1p(-p / low)
         )
         far = np.log1p((u / (high - p)) ** 2) + np.log1p((u / (low - p)) ** 2)
-        return np.asarray(rate * (p * np.log1p(self._m) - at_zero - 0.5 * far))
+        drift = p * np.log1p(self._m)
+        slack = np.abs(drift) + np.abs(p) * self._forward_condition + np.abs(p / (high - p)) + np.abs(p / (low - p))
+        return np.asarray(rate * (drift - at_zero - 0.5 * far + 16.0 * _EPS * slack))
 
     def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
         """The roots, at any ``tau``."""
         low, high = self._roots()
         shape = np.broadcast_shapes(np.shape(low), np.shape(tau))
-        inside = 1.0 - 4e-15
-        return np.broadcast_to(low * inside, shape), np.broadcast_to(1.0 + (high - 1.0) * inside, shape)
+        inside = 1.0 - 8.0 * _EPS
+        return np.broadcast_to(low * inside, shape), np.broadcast_to(high * inside, shape)
 
     def mean_variance(self, tau: Floats | float) -> Floats:
         """Variance of the log price: ``(sigma^2 + theta^2 nu) tau``."""

@@ -86,10 +86,10 @@ def factor_gradient(
     gradient[3] = (2.0 * sigma) * by_c - (rho * w) * by_b
     gradient[4] = -tilt * by_b
     gradient[5] = kappa_theta * slopes.b_value + v0 * fading
-    size = 4.0 * exponent_size(parts, kappa_theta * size_a, b_part)
+    size = 8.0 * exponent_size(parts, kappa_theta * size_a, b_part)
     caps = np.empty(gradient.shape)
     size_a = 16.0 * np.asarray(size_a)
-    caps[0] = 16.0 * np.abs(slopes.b_value)
+    caps[0] = (16.0 + 8.0 * np.abs(parts.x / one_x)) * np.abs(slopes.b_value)
     caps[1] = slopes.size_by_b + theta * size_a
     caps[2] = kappa * size_a
     caps[3] = (2.0 * sigma) * slopes.size_by_c + np.abs(rho * w) * slopes.size_by_b
@@ -108,8 +108,9 @@ def _slopes(
     b_value = 0.5 * q * f.s / one_x
     s_by_d = _s_slope(f, tau)
     half_s, half_r = 0.5 * f.s, 0.5 * f.r
-    y_by_b = half_r * (s_by_d * d_by_b) + half_s * r_by_b
-    y_by_c = half_r * (s_by_d * d_by_c) + half_s * r_by_c
+    y_b_parts = (half_r * (s_by_d * d_by_b), half_s * r_by_b)
+    y_c_parts = (half_r * (s_by_d * d_by_c), half_s * r_by_c)
+    y_by_b, y_by_c = y_b_parts[0] + y_b_parts[1], y_c_parts[0] + y_c_parts[1]
     y = f.s * half_r
     curve = 2.0 * y * y * _log_ratio_slope(f, along_path)
     t1, t2, t3 = tau * r_by_b, 2.0 * y_by_b / one_x, tau * r_by_c
@@ -118,8 +119,14 @@ def _slopes(
     u1, u2 = s_log * d_by_b, sigma2 * y_by_b / one_x
     u3, u4 = s_log * d_by_c, (sigma2 * y_by_c + y) / one_x
     modulus_b = v0 * np.abs(b_value)
-    size_by_b = kappa_theta * (np.abs(t1) + np.abs(t2)) + modulus_b * (np.abs(u1) + np.abs(u2))
-    size_by_c = kappa_theta * (np.abs(t3) + np.abs(t4) + np.abs(curve)) + modulus_b * (np.abs(u3) + np.abs(u4))
+    near = 1.0 / np.abs(one_x)
+    size_y_b = near * (np.abs(y_b_parts[0]) + np.abs(y_b_parts[1]))
+    size_y_c = near * (np.abs(y_c_parts[0]) + np.abs(y_c_parts[1]))
+    edge = 1.0 + near  # 1 + x is small near the edge of the strip, and so are the digits of what is divided by it
+    size_by_b = kappa_theta * (np.abs(t1) + 2.0 * size_y_b * edge) + modulus_b * (np.abs(u1) + sigma2 * size_y_b * edge)
+    size_by_c = kappa_theta * (np.abs(t3) + 2.0 * size_y_c * edge + np.abs(curve) * edge) + modulus_b * (
+        np.abs(u3) + (sigma2 * size_y_c + near * np.abs(y)) * edge
+    )
     found = _Slopes(
         b_value, t1 - t2, t3 - t4 - curve, b_value * (u1 - u2), b_value * (u3 - u4), 64.0 * size_by_b, 64.0 * size_by_c
     )

@@ -16,7 +16,7 @@ proven.
 Truncation. ``1/pi int_U^inf G(u) u^-power du`` with the model's non-increasing envelope ``G >= |phi|``, by steps on a
 geometric mesh; the omitted terms of a trapezoidal sum of non-increasing terms lie below the integral from the last
 node. Past the mesh the last ratio is continued, since envelopes steepen in log-log. Derivatives by parameters are
-taken to grow at most like ``(u / U)^GROWTH`` from twice their modulus at the last node: conservative, not proven.
+taken to grow at most like ``(u / U)^growth`` from twice their modulus at the last node: conservative, not proven.
 """
 
 from __future__ import annotations

@@ -28,9 +28,7 @@ import numpy as np
 
 from engine.arrays import Floats
 
-__all__ = ["DENSITY", "DENSITY_SLOPE", "DIGITAL", "GROWTH", "SHARE_DIGITAL", "VANILLA", "Kernel"]
-
-GROWTH = 2  # no d log phi / d parameter of the models here grows faster than |z|^2 along a line
+__all__ = ["DENSITY", "DENSITY_SLOPE", "DIGITAL", "SHARE_DIGITAL", "VANILLA", "Kernel"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,15 +40,16 @@ class Kernel:
     shift: float
     order: int
     parameter: int | None = None
+    growth: int = 0
 
-    def by(self, parameter: int) -> Kernel:
-        """The same kernel for the derivative by a parameter."""
-        return replace(self, parameter=parameter)
+    def by(self, parameter: int, growth: int = 2) -> Kernel:
+        """The same kernel for the derivative by a parameter, which grows at most like ``|z|^growth``."""
+        return replace(self, parameter=parameter, growth=growth)
 
     @property
     def power(self) -> int:
         """``|psi| <= const |phi| / u^power``."""
-        return self.order if self.parameter is None else self.order - GROWTH
+        return self.order - self.growth
 
     @property
     def markov(self) -> bool:

@@ -130,7 +130,8 @@ def _straightened(plan: Plan, bent: dict[int, list[BentSum]]) -> Ints:
     for r in list(bent):
         target = plan.log_target[r] - np.array([part.log_scale for part in bent[r]])
         missed = np.array([part.pieces[0] for part in bent[r]]) > _MISSED * np.exp(target)
-        if missed.any() and np.isfinite(plan.wanted[r]):
+        lost = not all(np.isfinite(part.pieces).all() for part in bent[r])
+        if (missed.any() or lost) and np.isfinite(plan.wanted[r]):
             nodes[r] = min(1 << int(np.ceil(np.log2(plan.wanted[r]))), _LONGEST)
             del bent[r]
     return nodes

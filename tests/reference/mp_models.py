@@ -97,7 +97,7 @@ class Heston:
             return 0
         kappa, theta, sigma, t = float(self.kappa), float(self.theta), float(self.sigma), float(tau)
         level = kappa * theta / sigma**2 * (1 + kappa * t)  # of the absolute rounding error of the first term
-        spread = math.sqrt(float(self.mean_variance(tau))) or 1.0
+        spread = math.sqrt(max(float(self.mean_variance(tau)), 0.0)) or 1.0
         turn = t * (kappa + sigma / spread)  # |D tau|: how much of 1 - exp(-D tau) survives
         return 4 + math.ceil(math.log10(level + 1) + math.log10(1 + 1 / turn))
 
