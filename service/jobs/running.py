@@ -81,7 +81,8 @@ class Runner:
             raise JobStopped
         if self._blobs.has(job, f"pieces/{index}"):
             return
-        self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}))
+        if not self._blobs.has(job, "started.json"):
+            self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}))
         looked = time.perf_counter()
 
         def check() -> None:

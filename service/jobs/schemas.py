@@ -12,6 +12,10 @@ __all__ = ["JobAnswer", "JobLinks", "JobListAnswer", "JobProgress", "JobState", 
 JobState = Literal["queued", "running", "succeeded", "failed", "cancelled"]
 _EXAMPLE_ID = "5f0c7d1e9a4b4c86b2f3a1d0e7c69584"
 _TIME = "2026-03-16T08:00:00.000Z"
+_LINKS = {
+    name: f"/v1/calibrations/{_EXAMPLE_ID}{page}"
+    for name, page in (("self", ""), ("events", "/events"), ("report", "/report"))
+}
 
 
 class JobProgress(Answer):
@@ -24,12 +28,12 @@ class JobProgress(Answer):
 class JobLinks(Answer):
     """Where the rest is."""
 
-    self: str = described("The job.", unit="none", example=f"/v1/calibrations/{_EXAMPLE_ID}")
-    events: str = described("Its progress as server-sent events.", unit="none", example="/v1/calibrations/.../events")
+    self: str = described("The job.", unit="none", example=_LINKS["self"])
+    events: str = described("Its progress as server-sent events.", unit="none", example=_LINKS["events"])
     report: str | None = described(
         "A page to look at, once it has succeeded; absent for kinds of job without one.",
         unit="none",
-        example="/v1/calibrations/.../report",
+        example=_LINKS["report"],
         default=None,
     )
 
@@ -56,7 +60,7 @@ class JobSummary(Answer):
         unit="none",
         example=None,
     )
-    links: JobLinks = described("Where the rest is.", unit="none", example={})
+    links: JobLinks = described("Addresses of what belongs to it.", unit="none", example=_LINKS)
 
 
 class JobAnswer(JobSummary):
