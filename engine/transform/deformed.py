@@ -38,19 +38,20 @@ __all__ = ["BentSum", "bent_sums"]
 _PROBE_STEP = 0.25
 _SHORT, _LONG = 16.0, 44.0  # |z| up to exp of it times b
 _CANDIDATES = ((0.8, 0.9), (0.8, 0.6), (0.55, 0.85), (0.55, 0.5), (0.3, 0.8), (0.3, 0.4))  # (share of angle, of gap)
+_NEAR_ZONE = 1.0 / 64.0  # of a standard deviation on either side of k_inf
 _MOST_NODES = 2000
 _STRIKE_BLOCK = 256
 
 
 @dataclass(frozen=True, slots=True)
 class BentSum:
-    """One bent contour, for the strikes on one side of ``k_inf``: arguments ``i z`` (N,), terms ``psi`` (K, N) at the
-    strike ``k_near`` nearest to ``k_inf``, where they are largest, in units of ``exp(log_scale)``, and per kernel
-    (K,) what a bound needs."""
+    """One bent contour, for the strikes ``low <= k < high`` on one side of ``k_inf``: arguments ``i z`` (N,), terms
+    ``psi`` (K, N) at the strike ``k_near`` nearest to ``k_inf``, where they are largest, in units of
+    ``exp(log_scale)``, and per kernel (K,) what a bound needs."""
 
-    k_inf: float
+    low: float
+    high: float
     k_near: float
-    down: bool
     iz: Complexes
     psi: Complexes
     log_scale: float
@@ -60,7 +61,7 @@ class BentSum:
 
     def serves(self, k: Floats) -> Any:
         """Which of the strikes are its own."""
-        return (k >= self.k_inf) == self.down
+        return (k >= self.low) & (k < self.high)
 
     def totals(self, k: Floats, p: float) -> Floats:
         """The sums of every kernel at ``k`` (n,): shape (K, n)."""
@@ -85,14 +86,21 @@ class _Bend:
 
 
 def bent_sums(model: Model, tau: float, plan: Plan, row: int, kernels: list[Kernel]) -> list[BentSum]:
-    """The contours of one row, at most two. ``model`` holds that row's parameters alone, as floats or (1, 1)."""
+    """The contours of one row, at most four. ``model`` holds that row's parameters alone, as floats or (1, 1)."""
     k_inf, limit = model.bend(tau)
     low, high = float(plan.k_low[row]), float(plan.k_high[row])
+    # at k_inf itself only a power of |z| is left: a kernel that does not decay gets the strikes right there apart
+    apart = 0.0
+    if any(kernel.power < 1 for kernel in kernels):
+        apart = _NEAR_ZONE * float(np.sqrt(np.ravel(model.mean_variance(tau))[0]))
     out = []
-    if high >= k_inf:
-        out.append(_bent_sum(model, tau, plan, row, kernels, (-1.0, limit, k_inf), (max(low, k_inf), high)))
-    if low < k_inf:
-        out.append(_bent_sum(model, tau, plan, row, kernels, (1.0, limit, k_inf), (low, min(high, k_inf))))
+    for sign, near, far in ((-1.0, k_inf, high), (1.0, k_inf, low)):
+        middle = near - sign * apart
+        for edge, end in ((near, middle), (middle, far)):
+            span = (max(edge, low), min(end, high)) if sign < 0.0 else (max(end, low), min(edge, high))
+            if span[0] <= span[1] and (edge != end or edge == far):
+                serves = (edge, np.inf if end == far else end) if sign < 0.0 else (-np.inf if end == far else end, edge)
+                out.append(_bent_sum(model, tau, plan, row, kernels, (sign, limit), span, serves))
     return out
 
 
@@ -182,15 +190,16 @@ def _bent_sum(
     plan: Plan,
     row: int,
     kernels: list[Kernel],
-    sector: tuple[float, float, float],
+    sector: tuple[float, float],
     span: tuple[float, float],
+    serves: tuple[float, float],
 ) -> BentSum:
     """Trapezoidal terms on the chosen contour with the bound's ingredients."""
     p = float(plan.exponent[row])
     log_scale = float(np.ravel(model.log_moment(np.full((1, 1), p), tau))[0])
-    bend = _choose(model, tau, plan, row, kernels, sector[:2], span, log_scale, _SHORT)
+    bend = _choose(model, tau, plan, row, kernels, sector, span, log_scale, _SHORT)
     if not np.isfinite(bend.stop):
-        bend = _choose(model, tau, plan, row, kernels, sector[:2], span, log_scale, _LONG)
+        bend = _choose(model, tau, plan, row, kernels, sector, span, log_scale, _LONG)
     decades = (
         max(float(np.log(bend.worst) - plan.log_target[row]) + log_scale, 1.0) if np.isfinite(bend.worst) else 60.0
     )
@@ -222,7 +231,7 @@ def _bent_sum(
         slope[i] = float(modulus @ np.abs(z))
         pieces[i] = discretisation[i] + _tail(modulus)
         psi[i] = terms
-    return BentSum(sector[2], k_near, sector[0] < 0.0, iz, psi, log_scale, rounding, slope, pieces)
+    return BentSum(*serves, k_near, iz, psi, log_scale, rounding, slope, pieces)
 
 
 def _steps(bend: _Bend, decades: float) -> tuple[int, float]:
