@@ -94,8 +94,6 @@ HARD = [
     ((0.03, 33.3, 0.14, 3.44, 0.99999), 0.5),
     # one row at p = 1/2 where the wings are wide, or the value small
     ((5.842479730201147, 0.0, 7.07, 5.866e-07, -0.2344), 5.718492844311156),
-    ((2.727903832235975e-06, 0.0, 1.879e-06, 19.596335781776347, 0.24781337917493285), 2.8332611136031294),
-    ((0.0, 0.012682589, 1.4401567224977595e-06, 3.983366456467163, -0.9999846496938061), 0.008540434475590608),
     # critical moments next to 0 or 1
     ((0.006673843367526657, 3.4257044318746246, 0.014406160479904126, 4.793765603924984, 0.9999999999585917), 6.816267),
     (
@@ -103,11 +101,31 @@ HARD = [
         9.09120991,
     ),
     ((0.00012490520205768696, 2.854326749168979, 0.4112960506729919, 11.582704944341279, 0.4835217915), 14.0941345007),
-    ((0.07123703256689594, 0.001643807023112871, 4.836210884865281e-06, 6.684413149311713, 0.73371200), 19.9856103506),
     ((0.529594434196158, 0.02049307066406714, 0.0, 0.868900900554507, 0.9410388538249617), 10.559912565595939),
     # a fall so slow that the straight line would need a quarter of a million nodes
     ((0.017, 1.5768, 0.0398, 1.35, -0.5711), 4.0),
 ]
+
+
+# Nearly all of the mass sits at the forward itself and rare moves are large: out-of-the-money values far below what the
+# deviation suggests. One contour sums terms of the forward's size there, so such values are good to some 1e-16 of the
+# forward, not relatively: what is asked of them is that the bound covers the error and says so.
+ALL_BUT_AN_ATOM = [
+    ((2.727903832235975e-06, 0.0, 1.879e-06, 19.596335781776347, 0.24781337917493285), 2.8332611136031294),
+    ((0.0, 0.012682589, 1.4401567224977595e-06, 3.983366456467163, -0.9999846496938061), 0.008540434475590608),
+    ((0.07123703256689594, 0.001643807023112871, 4.836210884865281e-06, 6.684413149311713, 0.73371200), 19.9856103506),
+]
+
+
+@pytest.mark.parametrize(("values", "tau"), ALL_BUT_AN_ATOM)
+def test_bound_covers_where_the_relative_error_cannot(values: tuple[float, ...], tau: float) -> None:
+    names = ("v0", "kappa", "theta", "sigma", "rho")
+    model, twin = twins("heston", dict(zip(names, values, strict=True)))
+    asked = quotes(model, twin, tau, [-6.0, -2.5, -1.0, -0.1, 0.0, 0.3, 1.0, 6.0], digitals=True)
+    tally = judge(model, asked, tolerance=DEFAULT_TOLERANCE)
+    for tolerance in (1e-6, 1e-12):
+        tally.add(judge(model, asked, tolerance=tolerance))
+    assert not tally.faults, "\n".join(tally.faults)
 
 
 @pytest.mark.parametrize(("values", "tau"), HARD)
