@@ -15,6 +15,7 @@ from typing import Any, Final
 import httpx
 
 from service.demo.fit import FitError, fit_chain
+from service.demo.greeks import show_greeks
 from service.demo.make_chain import UNDERLYING
 from service.demo.server import running_server
 from service.demo.tables import number, table
@@ -177,10 +178,21 @@ def _find_vols(story: Story) -> str:
     return f"The prices of the last step sent back:\n\n{table(heads, rows)}"
 
 
+def _derive(story: Story) -> str:
+    return show_greeks(
+        story.post,
+        spot=story.chain["spot"],
+        expiry=story.surface["expiries"][3],
+        named=story.chain["expiries"][3]["expiry"],
+        model=story.model,
+    )
+
+
 _STEPS: Final[tuple[tuple[str, Callable[[Story], str]], ...]] = (
     ("Chain to forwards, discount factors and volatilities (POST /v1/chains)", _read_chain),
     ("What is wrong with which quote", _count_flags),
     ("A model fitted, as a job with progress (POST /v1/calibrations)", _fit),
     ("Smiles with prices, volatilities and error bounds (POST /v1/smiles)", _price_smile),
     ("Prices to volatilities (POST /v1/implied-vols)", _find_vols),
+    ("Greeks and sensitivities with their definitions (POST /v1/greeks)", _derive),
 )

@@ -23,7 +23,7 @@ __all__ = ["plan"]
 Columns: TypeAlias = dict[str, NDArray[np.float64]]
 _BLACK: Final = frozenset({"vega", "vanna", "volga", "black_delta", "black_gamma"})
 _OK, _NO_VOL, _NO_BOUND = range(3)
-_WORDS: Final = ("ok", "no_implied_vol", "no_bound")
+_WORDS: Final = np.array(["ok", "no_implied_vol", "no_bound"], dtype=object)
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,7 +82,7 @@ def _add_greeks(answer: dict[str, Any], found: GreekSlice, *, bounds: bool, sens
     greeks = _bounded(found.greeks, found.greek_bounds, statuses, no_vol)
     slopes = _bounded(found.sensitivities, found.sensitivity_bounds, statuses, no_vol)
     answer["with_respect_to"] = found.with_respect_to
-    answer["greek_statuses"] = [_WORDS[code] for code in statuses.tolist()]
+    answer["greek_statuses"] = _WORDS[statuses].tolist()
     answer["greeks"] = greeks
     if bounds:
         answer["greek_error_bounds"] = found.greek_bounds

@@ -17,8 +17,8 @@ from service.terms.pricing_schemas import PricingAsked, SmileSliceAsked
 
 __all__ = ["Prepared", "models_and_slices", "prepare", "slice_answer"]
 
-_STATUS_WORDS: Final = {int(status): status.word for status in Status}
-_PAYOFF_WORDS: Final = {int(payoff): payoff.word for payoff in Payoff}
+_STATUS_WORDS: Final = np.array([status.word for status in Status], dtype=object)  # codes count from 0
+_PAYOFF_WORDS: Final = np.array([payoff.word for payoff in Payoff], dtype=object)
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,8 +70,8 @@ def slice_answer(
         "forward": terms.forward,
         "discount_factor": terms.discount_factor,
         "strikes": asked.strikes,
-        "payoffs": [_PAYOFF_WORDS[code] for code in priced.payoffs.tolist()],
-        "statuses": [_STATUS_WORDS[code] for code in priced.statuses.tolist()],
+        "payoffs": _PAYOFF_WORDS[priced.payoffs].tolist(),
+        "statuses": _STATUS_WORDS[priced.statuses].tolist(),
     }
     if "price" in outputs:
         answer["prices"] = priced.prices

@@ -104,6 +104,7 @@ def test_demo_shows_the_whole_job(tmp_path: Path) -> None:
     text = done.stdout
     for words in ("/v1/chains", "/v1/smiles", "/v1/implied-vols", "Quillmark", "forward", "error bound", "not quotes"):
         assert words in text
+    assert "/v1/greeks" in text and re.search(r"^rho +price per 1.00 of the continuous rate$", text, re.MULTILINE)
     assert "/v1/calibrations" in text and "] 9/9 surfaces" in text
     report = Path(re.findall(r"report was saved: (.+)$", text, re.MULTILINE)[0])
     assert report.read_text(encoding="utf-8").startswith("<!DOCTYPE html>")
