@@ -87,6 +87,9 @@ def calibrate(
     if not runs:
         raise RefusedError("slices", "could not be valued at any start: strikes too far out for the model")
     best = min(runs, key=lambda run: run.cost)
+    if len(runs) > 1:  # the last start was perhaps another one, with other residuals
+        objective.restart()
+        objective.at(best.x)
     fitted = _settled(objective, best, settings)
     if progress is not None:
         progress(total, total)

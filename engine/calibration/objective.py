@@ -50,13 +50,15 @@ _FAR_BELOW, _LAST = 1e-9, 1e-10
 
 @dataclass(frozen=True, slots=True)
 class Evaluation:
-    """The surface at one point: residuals (n + m,), Jacobian (n + m, q), ``vols`` and ``value`` (n,) of the model."""
+    """The surface at one point: residuals (n + m,), Jacobian (n + m, q), ``vols`` and ``value`` (n,) of the model,
+    ``slopes`` (P, n) of the values by its parameters."""
 
     x: Floats
     residuals: Floats
     jacobian: Floats
     vols: Floats
     value: Floats
+    slopes: Floats
 
     @property
     def valued(self) -> bool:
@@ -76,6 +78,7 @@ class Objective:
         self._adapts = True
         self._best = np.inf
         self._last: Evaluation | None = None
+        self._rough: Evaluation | None = None
         # planned like the value (no growth); the bounds, which that makes worthless for the derivatives, are not read
         self._kernels = [VANILLA] + [replace(VANILLA, parameter=i) for i in range(len(coordinates.names))]
         self._prior = _prior_rows(coordinates, settings)
@@ -88,13 +91,15 @@ class Objective:
     def restart(self) -> None:
         """Forget how good a former run was: the tolerance follows the residuals anew."""
         self._adapts, self._best, self.tolerance, self._last = True, np.inf, LOOSEST, None
+        self._rough = None
 
     def tighten(self) -> None:
-        """From now on every evaluation is made with one tolerance, far below the residuals."""
+        """From now on every evaluation is made with one tolerance, far below the residuals. The point at hand is valued
+        anew when it comes back; its derivatives, which only steer, stand."""
         far_below = float(
             np.clip(_FAR_BELOW * self._best, self.settings.tolerance, max(_LAST, self.settings.tolerance))
         )
-        self._adapts, self.tolerance, self._last = False, far_below, None
+        self._adapts, self.tolerance, self._rough, self._last = False, far_below, self._last, None
 
     def at(self, x: Floats) -> Evaluation:
         """Values and Jacobian at ``x`` (q,); the last point is kept."""
@@ -112,7 +117,8 @@ class Objective:
         quotes, pull = self.quotes, self._prior
         self.evaluations += 1
         values, slope = self.coordinates.values(x)
-        found = self._priced(values)
+        rough = self._rough if self._rough is not None and np.array_equal(self._rough.x, x) else None
+        found = self._priced(values, rough.slopes if rough is not None and rough.valued else None)
         if found is None:
             return self._nothing(x)
         deviation = total_deviation(quotes.k, found[0])
@@ -127,16 +133,17 @@ class Objective:
         rows = (scale / root)[:, None] * (found[1:].T @ slope)
         residuals = np.concatenate([quotes.weights * error / root, pull.scale * (values[pull.at] - pull.toward)])
         jacobian = np.concatenate([rows, pull.scale[:, None] * slope[pull.at]])
-        known = (deviation.statuses == int(Status.OK)).all() and np.isfinite(jacobian).all()
-        if not (known and np.isfinite(residuals).all()):
+        sound = (deviation.statuses == int(Status.OK)).all() and np.isfinite(jacobian).all()
+        if not (sound and np.isfinite(residuals).all()):
             return self._nothing(x)
-        return Evaluation(x, residuals, jacobian, vols, found[0])
+        return Evaluation(x, residuals, jacobian, vols, found[0], found[1:])
 
-    def _priced(self, values: Floats) -> Floats | None:
-        """Values and their derivatives by the parameters (1 + P, n), or None where the model cannot be valued."""
+    def _priced(self, values: Floats, slopes: Floats | None) -> Floats | None:
+        """Values and their derivatives by the parameters (1 + P, n), or None where the model cannot be valued; only the
+        values where the ``slopes`` are known."""
         if not np.isfinite(values).all():
             return None
-        quotes = self.quotes
+        quotes, kernels = self.quotes, self._kernels if slopes is None else self._kernels[:1]
         model = model_from(self.kind, dict(zip(self.coordinates.names, values, strict=True)))
         try:
             model.check()
@@ -144,17 +151,17 @@ class Objective:
                 [model] * quotes.batch.starts.shape[0],
                 quotes.batch,
                 quotes.k,
-                kernels_of=lambda _: self._kernels,
+                kernels_of=lambda _: kernels,
                 tolerance=self.tolerance,
                 node_limit=NODE_LIMIT,
             )
         except (InputError, RefusedError):
             return None
-        return group.value
+        return group.value if slopes is None else np.concatenate([group.value, slopes])
 
     def _nothing(self, x: Floats) -> Evaluation:
         rows, none = self.quote_count + len(self._prior.at), np.full(self.quotes.k.shape, np.nan)
-        return Evaluation(x, np.full(rows, np.inf), np.zeros((rows, x.shape[0])), none, none)
+        return Evaluation(x, np.full(rows, np.inf), np.zeros((rows, x.shape[0])), none, none, none[None, :])
 
 
 @dataclass(frozen=True, slots=True)
