@@ -28,7 +28,7 @@ from engine.transform.window import sums_at
 
 __all__ = ["Contour", "Inversion", "invert"]
 
-_CHUNK = 128  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
+_CHUNK = 256  # slices planned and evaluated together: the plan's calls are spread thin, the grids stay near the cache
 _NOTHING = float(np.exp(NOTHING))
 _MOST_APART = 8  # missed strikes that are then planned one by one
 _TIGHTEST = 2.0**-16  # of the tolerance, for the second plan

@@ -37,7 +37,7 @@ ROUNDING = 200.0  # rounding units a row is assumed to lose at first; the report
 MOST_ROWS = 16  # per side
 _HEAVY = 0.05  # of a unit in the exponent, from the forward to the farthest strike
 _EASY = 0.6  # of the loss allowed: within it, cost decides
-_LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 10, 12, 14)}))
+_LADDER = np.array(sorted({m * 2**e for e in range(1, 16) for m in (8, 12)}))
 _STEP = 1.3  # ratio of the search grid for U
 _STEPS = 52
 
