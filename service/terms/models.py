@@ -101,7 +101,14 @@ def _schema(kind: type[Model]) -> type[ModelAsked]:
         **_fields(kind.name, kind.parameters),
     }
     text = f"{kind.title}. Source: {kind.source}."
-    return create_model(f"{_title(kind.name)}Model", __base__=ModelAsked, __doc__=text, **fields)
+    ordinary = {name: said.examples[0] for name, (_, said) in fields.items()}
+    return create_model(
+        f"{_title(kind.name)}Model",
+        __base__=ModelAsked,
+        __doc__=text,
+        __cls_kwargs__={"json_schema_extra": {"examples": [ordinary]}},
+        **fields,
+    )
 
 
 _SCHEMAS: Final = {name: _schema(kind) for name, kind in MODELS.items()}
@@ -125,7 +132,7 @@ def engine_model(asked: ModelAsked) -> Model:
 
 def greeks_of(name: str) -> list[str]:
     """The Greeks that a model has: those of a variance factor only where there is one."""
-    fields = _SCHEMAS[name].model_fields
-    ordinary = {field: said.examples[0] for field, said in fields.items() if said.examples}
-    has_variance = bool(engine_model(_SCHEMAS[name].model_validate(ordinary)).variance_weights())
+    schema = _SCHEMAS[name]
+    ordinary = {field: said.examples[0] for field, said in schema.model_fields.items() if said.examples}
+    has_variance = bool(engine_model(schema.model_validate(ordinary)).variance_weights())
     return [greek for greek in GREEKS if has_variance or greek != "minimum_variance_delta"]

@@ -320,7 +320,7 @@ def test_every_model_answers_what_it_says(contract: Contract) -> None:
         for greek in set(ALL) - set(said["greeks"]):
             refusal = contract.refused(PATH, {**body, "greeks": ["delta", greek]})
             assert list(refusal.faults) == ["/greeks/1"] and said["name"] in refusal.faults["/greeks/1"]
-    assert names >= {"black", "heston", "bates", "merton", "variance_gamma", "double_heston"}
+    assert names >= {"black", "heston", "bates", "merton", "variance_gamma", "double_heston", "kou"}
 
 
 def test_each_number_is_the_derivative_its_definition_names(contract: Contract) -> None:

@@ -16,6 +16,7 @@ from service.jobs.pool import running_workers
 from service.openapi_export import contract_files, main
 from service.settings import Settings
 from tests.contract.contract import Contract
+from tests.contract.requests import lewis
 
 FOLDER = Path(__file__).parents[2] / "openapi"
 EXAMPLES = sorted((FOLDER / "examples").glob("*.json"))
@@ -131,6 +132,20 @@ def test_every_example_runs(with_jobs: Contract, path: Path) -> None:
     answer = _send(with_jobs, example)
     assert answer.status_code == (202 if path.stem == "submit_calibration" else 200), answer.text
     with_jobs.hold(answer, example["method"].lower(), template)
+
+
+def test_the_example_of_every_model_runs(contract: Contract) -> None:
+    """One whole ``model`` object per model in the document, sent to both pricing resources."""
+    schemas = contract.document["components"]["schemas"]
+    union = schemas["SmilesAsked"]["properties"]["model"]["discriminator"]["mapping"]
+    said = [model["name"] for model in contract.client.get("/v1/models").json()["models"]]
+    assert sorted(union) == sorted(said)
+    for name, reference in union.items():
+        (example,) = schemas[reference.rpartition("/")[2]]["examples"]
+        assert example["name"] == name
+        for path in ("/v1/smiles", "/v1/greeks"):
+            (found,) = contract.post(path, lewis(model=example))["slices"]
+            assert found["statuses"] == ["ok"] * 5
 
 
 def test_refusals_are_documented_with_their_pages(contract: Contract) -> None:
