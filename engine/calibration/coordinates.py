@@ -64,11 +64,12 @@ def model_from(kind: type[Model], values: Mapping[str, float]) -> Model:
 
 
 def feller_ratio(values: Mapping[str, float]) -> float | None:
-    """``2 kappa theta / sigma^2``, the smallest over the variance factors; None without one."""
+    """``2 kappa theta / sigma^2``, the smallest over the variance factors; None without one that moves."""
     ratios = []
     for prefix in _factors(values):
         kappa, theta, sigma = (values[prefix + name] for name in ("kappa", "theta", "sigma"))
-        ratios.append(2.0 * kappa * theta / sigma**2 if sigma > 0.0 else np.inf)
+        if sigma > 0.0:
+            ratios.append(2.0 * kappa * theta / sigma**2)
     return float(min(ratios)) if ratios else None
 
 
@@ -132,12 +133,13 @@ class Coordinates:
             cap = np.sqrt(2.0 * kappa * theta) * (1.0 - _ROUND)
             if cap < high:
                 high = cap
+            if 0.0 < cap == high:
                 by_others = share * 0.5 * cap * (slope[one.kappa] / kappa + slope[one.theta] / theta)
         else:
-            floor = 0.5 * sigma * sigma / kappa * (1.0 + _ROUND)
-            if floor > low:
-                low = floor
+            floor = 0.5 * sigma * sigma / kappa * (1.0 + _ROUND) if kappa > 0.0 else np.inf
+            if low < floor <= high:
                 by_others = -(1.0 - share) * floor * slope[one.kappa] / kappa
+            low = max(low, floor)
         out[at] = low + share * (high - low) if high >= low else np.nan
         by_others[q] = high - low
         slope[at] = by_others

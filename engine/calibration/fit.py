@@ -85,7 +85,11 @@ def calibrate(
         if runs and min(run.cost for run in runs) < _PERFECT:
             break
     if not runs:
-        raise RefusedError("slices", "could not be valued at any start: strikes too far out for the model")
+        raise RefusedError(
+            "slices",
+            "could not be valued at any start: strikes too far out for the model, or settings that leave it no room",
+            allowed="a surface that the model can value at its start",
+        )
     best = min(runs, key=lambda run: run.cost)
     if len(runs) > 1:  # the last start was perhaps another one, with other residuals
         objective.restart()

@@ -101,7 +101,7 @@ class Calibration:
     ran out or no start could be valued. ``standard_errors``: None for parameters that are fixed or on a bound.
     ``correlation`` (q, q) of the parameters named by ``correlation_order``, those with a standard error.
     ``condition_number`` of the Jacobian in relative changes of the parameters. ``feller_ratio``: ``2 kappa theta /
-    sigma^2``, the smallest over the factors, None for a model without a variance factor, infinite at ``sigma = 0``.
+    sigma^2``, the smallest over the factors, None for a model without a variance factor or with ``sigma = 0``.
     ``rmse_vol``, ``rmse_price`` (in the unit of the forward) and ``max_abs_error_vol`` are plain, unweighted, over the
     quotes used. ``within_spread``: the share of the quotes with bid and ask whose model volatility lies between, None
     where there is none. ``evaluations``: of the whole surface, all starts; ``iterations`` of the start that was kept.

@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 
 from engine.calibration import CalibrationSettings, CalibrationSlice, Prior, calibrate
-from engine.errors import InputError
+from engine.errors import EngineError, InputError
 from tests.reference.mp_surfaces import surface
 
 TRUTH = {"v0": 0.05, "kappa": 1.5, "theta": 0.06, "sigma": 0.7, "rho": -0.5}  # Feller ratio 0.37
@@ -271,6 +271,21 @@ def test_slices_are_refused_by_place(change, argument, index):
     with pytest.raises(InputError) as fault:
         calibrate([replace(_clean()[0], **change)], CalibrationSettings())
     assert (fault.value.argument, fault.value.index) == (argument, index)
+
+
+@pytest.mark.parametrize("fixed", [{"kappa": 0.0}, {"theta": 0.0}, {"kappa": 0.0, "sigma": 0.3}])
+def test_settings_that_leave_no_room(fixed):
+    """Feller's condition with no mean reversion or no long-run variance admits nothing: refused, not a wrong answer."""
+    with pytest.raises(EngineError):
+        calibrate(_clean(), CalibrationSettings(feller="require", fixed=fixed))
+
+
+def test_edges_of_the_models_can_be_fixed():
+    """No mean reversion, no vol of vol: admissible models, fitted as they are."""
+    for fixed in ({"kappa": 0.0}, {"sigma": 0.0}):
+        fit = calibrate(_clean(), CalibrationSettings(fixed=fixed, max_evaluations=40))
+        assert np.isfinite(fit.rmse_vol)
+        assert fit.feller_ratio is None or fit.feller_ratio < 1e-9
 
 
 def test_no_slices():
