@@ -1,9 +1,9 @@
 """The files of jobs: requests, pieces of results, whole results and outcomes, in one folder a job.
 
-Large inputs and outputs do not belong in the rows of a store. A file appears whole or not at all, and is never
-changed: it is written beside its place, forced to the disk, and linked to its name, which fails where that is taken.
-So whoever is second to write a piece that was computed twice changes nothing, and a job has one outcome, decided once,
-even when it is cancelled in the instant it ends. The folder may be shared by several hosts.
+Large inputs and outputs do not belong in the rows of a store. A file appears whole or not at all, and is never changed:
+it is written beside its place, forced to the disk where that matters, and linked to its name, which fails where that is
+taken. So whoever is second to write a piece that was computed twice changes nothing, and a job has one outcome, decided
+once, even when it is cancelled in the instant it ends. The folder may be shared by several hosts.
 """
 
 from __future__ import annotations
@@ -27,8 +27,9 @@ class Blobs:
     def __init__(self, folder: Path) -> None:
         self._folder = folder
 
-    def put(self, job: str, name: str, data: bytes) -> bool:
-        """Write a file once; whether it was this call that wrote it. Raises OSError where the folder fails."""
+    def put(self, job: str, name: str, data: bytes, *, force: bool = True) -> bool:
+        """Write a file once; whether it was this call that wrote it. Raises OSError where the folder fails. Without
+        ``force`` it may be lost, or be empty, after a loss of power."""
         place = self._place(job) / name
         self._folder.mkdir(mode=0o700, parents=True, exist_ok=True)
         place.parent.mkdir(parents=True, exist_ok=True)
@@ -36,8 +37,9 @@ class Blobs:
         try:
             with beside.open("wb") as file:
                 file.write(data)
-                file.flush()
-                os.fsync(file.fileno())
+                if force:
+                    file.flush()
+                    os.fsync(file.fileno())
             os.link(beside, place)
         except FileExistsError:
             return False
@@ -61,8 +63,8 @@ class Blobs:
         self.put(job, f"{_PIECES}/{index}", data)
 
     def piece(self, job: str, index: int) -> bytes | None:
-        """The result of one piece, or None."""
-        return self.get(job, f"{_PIECES}/{index}")
+        """The result of one piece, or None: one without a byte is none."""
+        return self.get(job, f"{_PIECES}/{index}") or None
 
     def pieces_done(self, job: str) -> int:
         """How many pieces are there."""

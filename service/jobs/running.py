@@ -57,14 +57,16 @@ class Runner:
 
     def finish(self, kind: str, job: str, digest: str) -> None:
         """Put the pieces together and call the job succeeded."""
-        work = self._work(kind, job, digest)
-        pieces = [self._blobs.piece(job, index) for index in range(work.count)]
         if self.over(job):
             return
-        if any(piece is None for piece in pieces):
-            self.fail(job, LOST)
-            return
-        self._blobs.put(job, "result.json", work.join([piece for piece in pieces if piece is not None]))
+        if not self._blobs.has(job, "result.json"):
+            work = self._work(kind, job, digest)
+            found = [self._blobs.piece(job, index) for index in range(work.count)]
+            pieces = [piece for piece in found if piece is not None]
+            if len(pieces) < work.count:
+                self.fail(job, LOST)
+                return
+            self._blobs.put(job, "result.json", work.join(pieces))
         end_job(self._blobs, job, "succeeded")
         self._blobs.drop_pieces(job)
 
@@ -79,10 +81,10 @@ class Runner:
     def _piece(self, work: Work, job: str, index: int, before: float) -> None:
         if self.over(job):
             raise JobStopped
-        if self._blobs.has(job, f"pieces/{index}"):
+        if self._blobs.has(job, "result.json") or self._blobs.has(job, f"pieces/{index}"):
             return
         if not self._blobs.has(job, "started.json"):
-            self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}))
+            self._blobs.put(job, "started.json", orjson.dumps({"at": time.time()}), force=False)
         looked = time.perf_counter()
 
         def check() -> None:
@@ -99,7 +101,10 @@ class Runner:
             made = work.failed(index, f"the processes that computed it ended unexpectedly, {_TRIES} times")
         else:
             made = work.compute(index, check)
-        self._blobs.put_piece(job, index, made)
+        if work.count == 1:  # its piece is the result
+            self._blobs.put(job, "result.json", work.join([made]))
+        else:
+            self._blobs.put_piece(job, index, made)
 
     def _work(self, kind: str, job: str, digest: str) -> Work:
         work = self._read.get(job)
