@@ -144,7 +144,7 @@ def _worker(chosen: argparse.Namespace) -> int:
     count = max(1, settings.job_workers)
     signal.signal(signal.SIGTERM, lambda *_: sys.exit(_DONE))
     with running_workers(settings, count):
-        print(f"{count} workers take jobs from {where(settings)}. Ctrl-C stops them.", flush=True)
+        print(f"{count} worker{'s' * (count > 1)} for the jobs of {where(settings)}. Ctrl-C to stop.", flush=True)
         while True:
             time.sleep(3_600.0)
 

@@ -7,6 +7,8 @@ import json
 import os
 import signal
 import sqlite3
+import subprocess
+import sys
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -18,6 +20,7 @@ import pytest
 from sqlalchemy import text
 
 from service.jobs.database import PATIENT, open_engine
+from service.jobs.pool import worker_environment
 from service.jobs.store import Job, JobStore
 from service.jobs.worker import SILENT_SECONDS
 from service.settings import Settings
@@ -283,3 +286,20 @@ def test_nothing_that_was_kept_can_run_code(embedded: Settings) -> None:
     for value in kept:
         json.loads(value)
     assert os.stat(path).st_mode & 0o077 == 0, "others on this machine can read the store"
+
+
+def test_the_worker_command_takes_jobs_until_it_is_told_to_stop(embedded: Settings) -> None:
+    """``smilewright worker`` beside a store, as on another host; TERM ends it with code 0 and its workers with it."""
+    store = JobStore(embedded)
+    command = [sys.executable, "-m", "service.cli", "worker", "--job-workers", "1"]
+    process = subprocess.Popen(command, env=worker_environment(embedded), stdout=subprocess.PIPE, text=True)
+    assert process.stdout is not None
+    assert "1 worker for the jobs of" in process.stdout.readline()
+    await_(lambda: ready(store))
+    found, result = finished(store, submit(store, "calibrations", surfaces(2), 2))
+    process.terminate()
+    assert process.wait(60) == 0
+    process.stdout.close()
+    store.close()
+    assert found.state == "succeeded" and len(result["surfaces"]) == 2
+    assert _beating(embedded) == []
