@@ -16,7 +16,7 @@ import pytest
 from engine import MODELS, Payoff, PricedSlice, Slice, Status, price_smiles
 from engine.models.heston import Heston
 from engine.transform import plan, plan_cache
-from tests.properties.parameter_sets import DIMENSIONS, expiry, pair
+from tests.properties.parameter_sets import DIMENSIONS, expiry, pair, twins
 from tests.properties.verdict import Quotes, Verdict, judge, quotes
 
 EPS = float(np.finfo(np.float64).eps)
@@ -89,6 +89,43 @@ def test_bound_covers_the_error_at_length(name: str, contour: str) -> None:
     print(f"{name} on {contour} contours: {tally}")
     assert tally.unknown <= 0.02 * tally.prices
     assert not tally.faults, "\n".join(tally.faults[:20])
+
+
+# Jumps on little diffusion or none: atoms, densities of several scales, a characteristic function that never dies out.
+PURE_JUMPS = [
+    (0.0, 0.7, -0.1, 0.2),
+    (0.0, 0.7, -0.1, 0.0),
+    (0.0, 50.0, -0.1, 0.2),
+    (0.0, 1.0, 0.0, 0.3),
+    (1e-3, 0.7, -0.1, 0.0),
+    (1e-3, 20.0, 0.05, 0.0),
+    (1e-3, 50.0, -0.1, 0.01),
+    (0.2, 0.7, -0.1, 0.0),
+    (0.2, 0.0, -0.1, 0.2),
+    (0.2, 1.0, 0.0, 0.0),
+    (2.0, 100.0, 1.0, 1.0),
+    (0.1, 100.0, 3.0, 3.0),
+]
+
+
+@pytest.mark.parametrize("values", PURE_JUMPS)
+@pytest.mark.parametrize("tau", [1.0 / 365.0, 1.0, 10.0])
+def test_jumps_without_much_diffusion(values: tuple[float, ...], tau: float) -> None:
+    """Against Merton's series; a variance factor at rest (Bates, v0 = theta = 0) is Merton without diffusion."""
+    volatility, *jumps = values
+    names = ("jump_intensity", "jump_mean", "jump_stdev")
+    by_name = dict(zip(names, jumps, strict=True))
+    model, twin = twins("merton", {"volatility": volatility, **by_name})
+    models = [model]
+    if volatility == 0.0:
+        models.append(MODELS["bates"](v0=0.0, kappa=1.0, theta=0.0, sigma=0.5, rho=-0.5, **by_name))
+    spread = math.sqrt(float(model.mean_variance(tau)))
+    distances = np.array([-3.1, -0.63, -0.2345, -0.021, 0.0133, 0.4, 2.2]) / spread
+    asked = quotes(model, twin, tau, distances.tolist(), digitals=True)
+    for one in models:
+        for tolerance in (1e-10, 1e-6):
+            verdict = judge(one, asked, tolerance=tolerance)
+            assert not verdict.faults, "\n".join(verdict.faults)
 
 
 @over_models

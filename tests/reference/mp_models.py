@@ -434,8 +434,10 @@ class Kou:
 
 
 class _ExponentialJumps:
+    """``J`` is rational with real poles and dies out in every direction off the axis."""
+
     def sector(self, p: Any) -> tuple[float, float]:
-        return QUARTER
+        return (0.0, math.pi)
 
     def __init__(self, model: Kou, tau: Any) -> None:
         self.count, self.up = mpfr(model.jump_intensity) * mpfr(tau), mpfr(model.up_probability)
@@ -449,7 +451,9 @@ class _ExponentialJumps:
         return self.count * (self._jump(w) - 1 - self.compensator * w), None
 
     def edges(self, *, bits: int | None = None) -> tuple[Any, Any]:
-        return -self.rate_down, self.rate_up
+        if self.count == 0:
+            return -INF, INF
+        return -self.rate_down if self.up < 1 else -INF, self.rate_up if self.up > 0 else INF
 
     def slope(self) -> Any:
         return mpc(-self.count * self.compensator)

@@ -139,12 +139,13 @@ def _digital(at: Any, edges: tuple[Any, Any], k: Any, above: bool, digits: int) 
 
 
 def _mixed(model: Any, tau: Any, k: Any, payoff: _Payoff, call: bool, digits: int) -> Any:
-    """A mixture of lognormals, summed until five terms in a row no longer matter."""
+    """A mixture of lognormals, summed until five terms in a row no longer matter or have no weight left."""
     count, total, quiet = mpfr(model.jump_intensity) * mpfr(tau), mpfr(0), 0
     for n, (weight, log_forward, variance) in enumerate(model.mixture(tau)):
         term = weight * _lognormal(log_forward, variance, k, payoff, 1 if call else -1)
         total += term
-        quiet = quiet + 1 if n > count and term <= total * mpfr(10) ** -(digits + 5) else 0
+        idle = term <= total * mpfr(10) ** -(digits + 5) if total > 0 else weight < mpfr("1e-600")
+        quiet = quiet + 1 if n > count and idle else 0
         if quiet == 5:
             return total
 
