@@ -73,11 +73,11 @@ def test_a_port_in_use_is_one_sentence_and_exit_code_1() -> None:
 
 @pytest.mark.parametrize("workers", ["1", "2"])
 @pytest.mark.parametrize("how", [signal.SIGTERM, signal.SIGINT])
-def test_serve_says_where_it_listens_and_stops_when_told(how: signal.Signals, workers: str) -> None:
+def test_serve_says_where_it_listens_and_stops_when_told(how: signal.Signals, workers: str, tmp_path: Path) -> None:
     process = subprocess.Popen(
         [*COMMAND, "serve", "--port", "0", "--workers", workers],
         cwd=ROOT,
-        env=_environment(),
+        env=_environment(SMILEWRIGHT_DATA_DIR=str(tmp_path), SMILEWRIGHT_JOB_WORKERS="1"),
         stdout=subprocess.PIPE,
         stderr=subprocess.DEVNULL,
         text=True,

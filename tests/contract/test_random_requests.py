@@ -17,7 +17,7 @@ from schemathesis import GenerationMode
 from schemathesis.checks import load_all_checks
 from schemathesis.specs.openapi.checks import positive_data_acceptance
 
-REQUESTS = {"price_smiles": 360, "compute_greeks": 300, "find_implied_vols": 240, "read_chain": 240}
+REQUESTS = {"price_smiles": 360, "compute_greeks": 300, "find_implied_vols": 210, "read_chain": 150}
 MARKET = {"spot": 100.0, "rate": 0.03, "dividend_yield": 0.01}
 
 load_all_checks()
