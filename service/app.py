@@ -59,6 +59,7 @@ def create_app(settings: Settings) -> FastAPI:
         redirect_slashes=False,
         telemetry={"tracing": False, "metrics": False, "logs": False},  # ours tells it, and each costs a look-up
     )
+    app.state.desk = desk
     # 1. Outermost: ids, times, metrics, log, and what no handler expected.
     app.add_middleware(Telemetry, metrics=metrics, access_log=settings.access_log)
     # 2. Every expected fault becomes a problem answer by the one table.

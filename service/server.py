@@ -68,7 +68,10 @@ def serve(settings: Settings, bound: socket.socket) -> None:
     options = server_options(settings)
     with running_workers(settings, settings.job_workers):
         if settings.workers == 1:
-            uvicorn.Server(uvicorn.Config(create_app(settings), **options)).run(sockets=[bound])
+            app = create_app(settings)
+            server = uvicorn.Server(uvicorn.Config(app, **options))
+            app.state.desk.stopping = lambda: server.should_exit
+            server.run(sockets=[bound])
             return
         host, port = bound.getsockname()[:2]
         bound.close()

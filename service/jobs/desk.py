@@ -37,9 +37,13 @@ class Receipt:
 
 
 class Desk:
-    """Takes jobs of one app. Nothing is opened or started before the first."""
+    """Takes jobs of one app. Nothing is opened or started before the first.
+
+    ``stopping`` says whether the server is about to end. It waits for open streams, so they break off then, and their
+    readers come back to another server."""
 
     def __init__(self, settings: Settings, compute: Compute) -> None:
+        self.stopping: Callable[[], bool] = lambda: False
         self.settings = settings
         self.store = JobStore(settings)
         self._compute = compute

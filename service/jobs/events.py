@@ -32,7 +32,7 @@ async def events(desk: Desk, kind: JobKind, job: Job, *, seen: str | None) -> As
     told = int(seen) if seen and seen.isdecimal() and len(seen) < 10 else -1
     spoke, pause = time.monotonic(), _FIRST_LOOK
     yield _FIRST
-    while True:
+    while not desk.stopping():
         if job.done > told:
             told, spoke, pause = job.done, time.monotonic(), _FIRST_LOOK
             yield _event(str(told), "progress", {"done": job.done, "total": job.total, "status": job.state})

@@ -51,6 +51,7 @@ def server(settings: Settings) -> Iterator[tuple[Any, str]]:
     workers hear of it by their standard input."""
     environment = worker_environment(settings) | {"SMILEWRIGHT_PORT": "0", "SMILEWRIGHT_ACCESS_LOG": "false"}
     environment |= {"SMILEWRIGHT_JOB_WORKERS": str(settings.job_workers)}
+    environment |= {"SMILEWRIGHT_SHUTDOWN_SECONDS": str(settings.shutdown_seconds)}
     command = [sys.executable, "-m", "service.cli", "serve"]
     process = subprocess.Popen(command, env=environment, stdout=subprocess.PIPE, text=True)
     try:

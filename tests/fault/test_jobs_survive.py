@@ -303,3 +303,21 @@ def test_the_worker_command_takes_jobs_until_it_is_told_to_stop(embedded: Settin
     store.close()
     assert found.state == "succeeded" and len(result["surfaces"]) == 2
     assert _beating(embedded) == []
+
+
+def test_an_open_stream_does_not_hold_up_the_end_of_the_server(embedded: Settings) -> None:
+    """Told to stop with ten minutes for running requests, a server does not spend them on a stream of events."""
+    store = JobStore(embedded)
+    with server(embedded.model_copy(update={"job_workers": 0, "shutdown_seconds": 600})) as (process, base):
+        with workers(embedded, 1, COMMAND):
+            await_(lambda: ready(store))
+        answer = httpx.post(
+            f"{base}/v1/calibrations", content=surfaces(2), headers={"Content-Type": "application/json"}
+        )
+        with httpx.stream("GET", f"{base}{answer.headers['Location']}/events", timeout=60.0) as stream:
+            lines = stream.iter_lines()
+            await_(lambda: next(lines).startswith("event: progress"))
+            process.terminate()
+            assert [line for line in lines if line.startswith("event: end")] == []
+        assert process.wait(90) in (0, -signal.SIGTERM)
+    store.close()
