@@ -1,7 +1,7 @@
 """The store's database: SQLite in a folder by default, PostgreSQL by address; its engine and the beats of workers.
 
 Two manners of opening it. A serving process must not wait for a store that is away: its engine gives up within a
-quarter of a second on SQLite, two seconds on PostgreSQL. A worker waits: its work is worth more than its time.
+second on SQLite, two seconds on PostgreSQL. A worker waits: its work is worth more than its time.
 """
 
 from __future__ import annotations
@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["IMPATIENT", "PATIENT", "READY", "BeatBook", "address", "job_folder", "open_engine", "where"]
 
-IMPATIENT: Final = 0.25
+IMPATIENT: Final = 1.0
 PATIENT: Final = 30.0
 _SQLITE: Final = "sqlite:///"
 READY: Final = "ready"  # the row that is there once the store is made
@@ -50,14 +50,14 @@ def where(settings: Settings) -> str:
 
 
 def open_engine(settings: Settings, *, patience: float) -> Engine:
-    """An engine that connects when it is first used. ``patience`` in seconds, for a lock of SQLite; below one second it
+    """An engine that connects when it is first used. ``patience`` in seconds, for a lock of SQLite; below PATIENT it
     also bounds connections and statements of PostgreSQL."""
     import sqlalchemy as sa
 
     url = address(settings)
     if not url.startswith(_SQLITE):
         options: dict[str, Any] = {"application_name": "smilewright"}
-        if patience < 1.0:
+        if patience < PATIENT:
             options |= {
                 "connect_timeout": _CONNECT_SECONDS,
                 "options": f"-c statement_timeout={_STATEMENT_MILLISECONDS}",
@@ -73,7 +73,7 @@ def open_engine(settings: Settings, *, patience: float) -> Engine:
     @sa.event.listens_for(engine, "connect")
     def _prepare(connection: Any, _record: Any) -> None:
         connection.isolation_level = "IMMEDIATE"  # writers queue at the start of a transaction, not in its middle
-        if patience >= 1.0:
+        if patience >= PATIENT:
             connection.execute("PRAGMA journal_mode=WAL")  # kept in the file: readers do not wait for a writer
         connection.execute("PRAGMA synchronous=FULL")  # what was answered with 202 survives a loss of power
         connection.execute("PRAGMA foreign_keys=ON")
