@@ -22,7 +22,7 @@ from engine import GREEKS, MODELS, Payoff, Slice, Status, price_greeks
 from tests.properties.parameter_sets import DIMENSIONS, expiry, pair
 from tests.reference.mp_prices import otm_digitals, otm_value, otm_values
 
-SETS = range(2)
+SETS = [0, pytest.param(1, marks=pytest.mark.long)]
 LONG_SETS = range(100, 160)
 DISTANCES = (-1.3, 0.6)
 SPOT, RATE, YIELD = 100.0, 0.03, 0.01

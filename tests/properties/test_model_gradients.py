@@ -17,7 +17,12 @@ from tests.reference.mp_models import reference_model
 from tests.reference.mp_prices import log_moments
 
 EPS = float(np.finfo(np.float64).eps)
-SETS = 12
+QUICK_SETS, SETS = 4, 12  # drawn sets per model in the fast suite, and in all
+CASES = [
+    pytest.param(name, seed, marks=() if seed < QUICK_SETS else pytest.mark.long, id=f"{name}-{seed}")
+    for name in MODELS
+    for seed in range(SETS)
+]
 STEP = gmpy2.mpfr("1e-25")
 
 
@@ -27,7 +32,7 @@ def _difference(at: Callable[[Any], list[Any]]) -> list[Any]:
         return [(up - down) / (2 * STEP) for up, down in zip(at(STEP), at(-STEP), strict=True)]
 
 
-@pytest.mark.parametrize(("name", "seed"), [(name, seed) for name in MODELS for seed in range(SETS)])
+@pytest.mark.parametrize(("name", "seed"), CASES)
 def test_gradient_against_differences(name: str, seed: int) -> None:
     rng = np.random.default_rng([seed, 77, len(name)])
     u = [float(x) for x in rng.random(DIMENSIONS[name] + 1)]
