@@ -1,4 +1,4 @@
-"""Greeks and sensitivities of every model against differences of 34-digit prices: bounds that cover, 1e-8 of each.
+"""Greeks and sensitivities of every model against differences of 30-digit prices: bounds that cover, 1e-8 of each.
 
 The definitions are the service's own: delta and gamma with respect to the spot at fixed carry, theta = -dV/d(expiry) at
 fixed rates, rho = dV/d(rate) at fixed spot and yield, sensitivities at fixed forward and discount factor, Black
@@ -26,7 +26,7 @@ SETS = [0, pytest.param(1, marks=pytest.mark.long)]
 LONG_SETS = range(100, 160)
 DISTANCES = (-1.3, 0.6)
 SPOT, RATE, YIELD = 100.0, 0.03, 0.01
-DIGITS = 34
+DIGITS = 30
 STEP = gmpy2.mpfr("1e-11")  # relative: the square of it is left, the digits it costs are there to lose
 BLACK = ("vega", "vanna", "volga", "black_delta", "black_gamma")
 PAYOFFS = (Payoff.CALL, Payoff.PUT, Payoff.DIGITAL_CALL, Payoff.DIGITAL_PUT)
@@ -42,7 +42,7 @@ def shifted(twin: Any, name: str, by: Any) -> Any:
 
 
 class Quote:
-    """One option in 34 digits: its value as a function of the spot, the expiry, the rate and the model."""
+    """One option in 30 digits: its value as a function of the spot, the expiry, the rate and the model."""
 
     def __init__(self, twin: Any, tau: float, strike: float, payoff: Payoff, forward: float, discount: float) -> None:
         self.twin, self.tau, self.strike, self.payoff = twin, gmpy2.mpfr(tau), gmpy2.mpfr(strike), payoff

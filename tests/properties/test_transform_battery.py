@@ -109,7 +109,7 @@ PURE_JUMPS = [
 
 
 @pytest.mark.parametrize("values", PURE_JUMPS)
-@pytest.mark.parametrize("tau", [1.0 / 365.0, pytest.param(1.0, marks=pytest.mark.long), 10.0])
+@pytest.mark.parametrize("tau", [1.0 / 365.0, 1.0, pytest.param(10.0, marks=pytest.mark.long)])
 def test_jumps_without_much_diffusion(values: tuple[float, ...], tau: float) -> None:
     """Against Merton's series; a variance factor at rest (Bates, v0 = theta = 0) is Merton without diffusion."""
     volatility, *jumps = values

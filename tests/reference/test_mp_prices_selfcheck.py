@@ -201,12 +201,12 @@ AWKWARD = [
 
 @pytest.mark.parametrize(("model", "tau"), AWKWARD)
 def test_two_contours_and_two_precisions_agree(model: Any, tau: float) -> None:
-    """A steeper line at 26 digits against the usual one at 20: other nodes, another path of the logarithm."""
+    """A steeper line at 24 digits against the usual one at 20: other nodes, another path of the logarithm."""
     width = model.prepare(tau).width()
-    for distance in (-6, -1, 0, 0.5, 6):
+    for distance in (-6, 0, 0.5, 6):
         k = distance * width
         value = otm_value(model, tau, k)
-        assert near(otm_value(model, tau, k, digits=26, lean=0.6), value, "1e-19")
+        assert near(otm_value(model, tau, k, digits=24, lean=0.6), value, "1e-19")
         assert 0 <= value < min(1, math.exp(k))
 
 
@@ -215,7 +215,7 @@ def test_digitals_are_the_slope_of_the_value(model: Any, tau: float) -> None:
     """``P(X > k) = -exp(-k) dV/dk`` for the call (from the definition); both sides add up to one."""
     k = 0.7 * model.prepare(tau).width()
     above = digital(model, tau, k, above=True)
-    slope = sensitivity(lambda x: otm_value(model, tau, x, digits=40), k, digits=20)
+    slope = sensitivity(lambda x: otm_value(model, tau, x, digits=36), k, digits=18)
     assert near(-slope * gmpy2.exp(-mpfr(k)), above, "1e-15")
     assert near(above + digital(model, tau, k, above=False), 1, "1e-19")
 
