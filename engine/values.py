@@ -135,7 +135,10 @@ def closed_form(kernels: list[Kernel], k: Floats, s: Floats, tau: Floats) -> tup
             found = _one_closed_form(kernel, k, s, tau, d1, d2)
             lost = ~np.isfinite(found)
             value[i] = np.where(lost, 0.0, found)
-            bound[i] = np.where(lost, np.inf, _EPS * (16.0 + 8.0 * steep) * np.abs(found) + _TINY)
+            rounding = np.where(found == 0.0, 0.0, _EPS * (16.0 + 8.0 * steep) * np.abs(found)) + _TINY
+            bound[i] = np.where(lost, np.inf, rounding)
+            if kernel.markov:  # a vanilla per unit forward and a probability are at most 1
+                bound[i] = np.minimum(bound[i], 1.0)
     return value, bound
 
 
