@@ -12,7 +12,7 @@ import gmpy2
 import numpy as np
 
 from engine.smile import Slice, price_smiles
-from engine.status import Payoff
+from engine.status import Payoff, Status
 from tests.reference.mp_prices import NotReached, otm_digitals, otm_values
 
 __all__ = ["FORWARD", "Quotes", "Verdict", "judge", "quotes"]
@@ -32,6 +32,7 @@ class Verdict:
     judged: int = 0  # prices above LEAST
     relative: float = 0.0  # worst relative error among them
     ratio: float = 0.0  # worst error / stated bound, over all prices
+    missed: list[str] = field(default_factory=list)  # less accurate than asked, and the answer says so
     faults: list[str] = field(default_factory=list)
 
     def add(self, other: Verdict) -> None:
@@ -42,13 +43,15 @@ class Verdict:
         self.judged += other.judged
         self.relative = max(self.relative, other.relative)
         self.ratio = max(self.ratio, other.ratio)
+        self.missed += other.missed
         self.faults += other.faults
 
     def __str__(self) -> str:
         return (
             f"{self.smiles} smiles, {self.prices} prices: worst error / stated bound {self.ratio:.3g}; worst relative "
             f"error {self.relative:.3g} over {self.judged} prices above 1e-200 of the forward; "
-            f"{self.unknown} prices the reference could not tell; {len(self.faults)} faults"
+            f"{self.unknown} prices the reference could not tell; {len(self.missed)} less accurate than asked with a "
+            f"status that says so; {len(self.faults)} faults"
         )
 
 
@@ -90,8 +93,8 @@ def _told(route: Any, twin: Any, tau: float, strike: float, digits: int, unit: f
 def judge(model: Any, asked: Quotes, *, tolerance: float, relative: float = math.inf) -> Verdict:
     """Price one smile and compare every number.
 
-    A fault: an error above the stated bound, or above ``relative`` where the value is larger than LEAST of the
-    forward, or any exception or warning on the way.
+    A fault: an error above the stated bound; or above ``relative`` of a value larger than LEAST of the forward, under
+    the status OK (under TOLERANCE_NOT_MET it counts as missed); or any exception or warning.
     """
     out = Verdict(smiles=1)
     one = Slice(asked.tau, FORWARD, 1.0, asked.strikes, asked.payoffs)
@@ -116,7 +119,8 @@ def judge(model: Any, asked: Quotes, *, tolerance: float, relative: float = math
         out.judged += int(worth)
         out.relative, out.ratio = max(out.relative, share), max(out.ratio, ratio)
         if not ratio <= 1.0 or not share <= relative:
-            out.faults.append(
+            told = ratio <= 1.0 and found.statuses[i] == Status.TOLERANCE_NOT_MET
+            (out.missed if told else out.faults).append(
                 f"{Payoff(found.payoffs[i]).word} {model} tau={asked.tau!r} strike={float(asked.strikes[i])!r} "
                 f"forward={FORWARD} tolerance={tolerance!r}: {price!r} is off by {float(error):.3g}, stated bound "
                 f"{bound:.3g} (ratio {ratio:.3g}), relative {share:.3g}; {found.transform}"
