@@ -9,12 +9,14 @@ from numpy.typing import ArrayLike, NDArray
 
 from engine.errors import InputError
 
-__all__ = ["Bytes", "Complexes", "Floats", "Ints", "vector"]
+__all__ = ["EPS", "Bytes", "Complexes", "Floats", "Ints", "vector"]
 
 Floats: TypeAlias = NDArray[np.float64]
 Complexes: TypeAlias = NDArray[np.complex128]
 Ints: TypeAlias = NDArray[np.int64]
 Bytes: TypeAlias = NDArray[np.uint8]
+
+EPS = float(np.finfo(np.float64).eps)  # the gap between 1 and the next double
 
 
 def vector(name: str, values: ArrayLike, *, length: int | None = None) -> Floats:

@@ -31,7 +31,7 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Floats
+from engine.arrays import EPS, Floats
 from engine.errors import InputError
 from engine.greek_kernels import KernelTable, black_columns, kernels_for
 from engine.moneyness import log_moneyness
@@ -55,7 +55,6 @@ GREEKS = (
     "black_gamma",
 )
 _BLACK = ("vega", "vanna", "volga", "black_delta", "black_gamma")
-_EPS = float(np.finfo(np.float64).eps)
 
 
 @dataclass(frozen=True, slots=True)
@@ -220,7 +219,7 @@ def _sum(*terms: tuple[_Column, Any]) -> _Column:
     """A linear combination, its bound and the rounding of the sum."""
     parts = [column.value * factor for column, factor in terms]
     bound = sum(column.bound * np.abs(factor) for column, factor in terms)
-    rounding = 4.0 * _EPS * np.sum(np.abs(parts), axis=0)
+    rounding = 4.0 * EPS * np.sum(np.abs(parts), axis=0)
     return _Column(np.sum(parts, axis=0), np.asarray(bound + rounding))
 
 
@@ -241,7 +240,7 @@ def _by_forward(t: _Terms) -> _Column:
         density, density_bound = t.table.density
         value[~plain] = (sign * t.discount * density / t.forward)[~plain]
         bound[~plain] = (t.discount * density_bound / t.forward)[~plain]
-    return _Column(value, bound + 4.0 * _EPS * np.abs(value))
+    return _Column(value, bound + 4.0 * EPS * np.abs(value))
 
 
 def _second_by_forward(t: _Terms) -> _Column:
@@ -267,7 +266,7 @@ def _by_parameter(t: _Terms, index: int) -> _Column:
         value = np.where(t.sides.digital, sign * t.discount * slope, value)
         bound = np.where(t.sides.digital, t.discount * slope_bound, bound)
     lost = ~np.isfinite(bound)
-    return _Column(np.where(lost, np.nan, value), bound + 4.0 * _EPS * np.abs(value))
+    return _Column(np.where(lost, np.nan, value), bound + 4.0 * EPS * np.abs(value))
 
 
 def _theta(group: Group, t: _Terms, by_forward: _Column) -> _Column:
@@ -275,7 +274,7 @@ def _theta(group: Group, t: _Terms, by_forward: _Column) -> _Column:
     by_tau = _by_parameter(t, len(group.model.sensitivity_names))
     found = _sum((t.price, rate), (by_forward, -t.carry * t.forward), (by_tau, -1.0))
     # the rates are quotients of logarithms by tau: rounding of the discount factor and of the forward is divided by it
-    rates = 4.0 * _EPS / t.tau * (np.abs(t.price.value) + np.abs(by_forward.value * t.forward))
+    rates = 4.0 * EPS / t.tau * (np.abs(t.price.value) + np.abs(by_forward.value * t.forward))
     return _Column(found.value, found.bound + rates)
 
 
@@ -302,13 +301,13 @@ def _black(t: _Terms, vols: Floats, wanted: tuple[str, ...]) -> dict[str, _Colum
     vega = found.vanilla_vega * t.discount * t.forward
     with np.errstate(divide="ignore", invalid="ignore"):
         vol_error = (
-            np.where(vega > 0.0, t.table.vanilla_bound * t.discount * t.forward / vega, np.inf) + 8.0 * _EPS * vols
+            np.where(vega > 0.0, t.table.vanilla_bound * t.discount * t.forward / vega, np.inf) + 8.0 * EPS * vols
         )
     out = {}
     for name in (name for name in wanted if name in _BLACK):
         value = found.columns[name] * scale[name]
         with np.errstate(invalid="ignore"):
-            bound = np.abs(found.slopes[name] * scale[name]) * vol_error + 64.0 * _EPS * np.abs(value) * found.steepness
+            bound = np.abs(found.slopes[name] * scale[name]) * vol_error + 64.0 * EPS * np.abs(value) * found.steepness
         lost = ~np.isfinite(value) | np.isnan(bound)
         out[name] = _Column(np.where(lost, np.nan, value), np.where(lost, np.inf, bound))
     return out

@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Bytes, Floats
+from engine.arrays import EPS, Bytes, Floats
 from engine.black import total_deviation
 from engine.errors import InputError
 from engine.moneyness import log_moneyness
@@ -38,7 +38,6 @@ __all__ = [
 
 TOLERANCE_RANGE = (1e-14, 1e-2)
 NODE_LIMIT = 4_000_000
-_EPS = float(np.finfo(np.float64).eps)
 _CALL, _PUT, _OTM, _DIGITAL_CALL = (int(p) for p in (Payoff.CALL, Payoff.PUT, Payoff.OTM, Payoff.DIGITAL_CALL))
 _OK, _TOLERANCE_NOT_MET = int(Status.OK), int(Status.TOLERANCE_NOT_MET)
 
@@ -133,7 +132,7 @@ def assemble_prices(
     intrinsic = np.where(sides.in_money, np.abs(forward - batch.strikes), 0.0)
     probability = np.where(sides.in_money, 1.0 - p_value, p_value)
     prices = discount * np.where(sides.digital, probability, value * forward + intrinsic)
-    bounds = discount * np.where(sides.digital, p_bound, bound * forward) + 4.0 * _EPS * prices
+    bounds = discount * np.where(sides.digital, p_bound, bound * forward) + 4.0 * EPS * prices
     statuses = np.zeros(k.shape, dtype=np.uint8)
     vols = np.full(k.shape, np.nan)
     if implied_vols:

@@ -21,7 +21,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import ndtr
 
-from engine.arrays import Floats, Ints
+from engine.arrays import EPS, Floats, Ints
 from engine.black import otm_value
 from engine.models.black import Black
 from engine.protocols import Model
@@ -32,7 +32,6 @@ from engine.transform.reach import Strikes
 
 __all__ = ["Group", "kernel_values"]
 
-_EPS = float(np.finfo(np.float64).eps)
 _NO_VARIANCE = 1e-32  # total variance below which every vanilla is worth less than rounding of the forward
 _TINY = float(np.finfo(np.float64).tiny)
 
@@ -135,7 +134,7 @@ def closed_form(kernels: list[Kernel], k: Floats, s: Floats, tau: Floats) -> tup
             found = _one_closed_form(kernel, k, s, tau, d1, d2)
             lost = ~np.isfinite(found)
             value[i] = np.where(lost, 0.0, found)
-            rounding = np.where(found == 0.0, 0.0, _EPS * (16.0 + 8.0 * steep) * np.abs(found)) + _TINY
+            rounding = np.where(found == 0.0, 0.0, EPS * (16.0 + 8.0 * steep) * np.abs(found)) + _TINY
             bound[i] = np.where(lost, np.inf, rounding)
             if kernel.markov:  # a vanilla per unit forward and a probability are at most 1
                 bound[i] = np.minimum(bound[i], 1.0)

@@ -22,7 +22,7 @@ from typing import Any, ClassVar
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats
+from engine.arrays import EPS, Complexes, Floats
 from engine.errors import InputError
 from engine.models.parameters import Columns, check_parameters
 from engine.models.variance_factor import log1p
@@ -30,7 +30,6 @@ from engine.protocols import CfGradient, ParameterSpec
 
 __all__ = ["VarianceGamma"]
 
-_EPS = float(np.finfo(np.float64).eps)
 _LEAST_MARGIN = 1e-6  # of 1 - theta nu - sigma^2 nu / 2: nearer to 0 the forward all but diverges
 
 
@@ -144,13 +143,13 @@ class VarianceGamma(Columns):
         far = np.log1p((u / (high - p)) ** 2) + np.log1p((u / (low - p)) ** 2)
         drift = p * np.log1p(self._m)
         slack = np.abs(drift) + np.abs(p) * self._forward_condition + np.abs(p / (high - p)) + np.abs(p / (low - p))
-        return np.asarray(rate * (drift - at_zero - 0.5 * far + 16.0 * _EPS * slack))
+        return np.asarray(rate * (drift - at_zero - 0.5 * far + 16.0 * EPS * slack))
 
     def strip(self, tau: Floats | float, *, precise: bool = False) -> tuple[Floats, Floats]:
         """The roots, at any ``tau``."""
         low, high = self._roots()
         shape = np.broadcast_shapes(np.shape(low), np.shape(tau))
-        inside = 1.0 - 8.0 * _EPS
+        inside = 1.0 - 8.0 * EPS
         return np.broadcast_to(low * inside, shape), np.broadcast_to(high * inside, shape)
 
     def mean_variance(self, tau: Floats | float) -> Floats:

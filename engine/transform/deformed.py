@@ -25,12 +25,11 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Complexes, Floats
+from engine.arrays import EPS, Complexes, Floats
 from engine.protocols import Model
 from engine.transform.bounds import log_moduli
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
-from engine.transform.record import EPS
 from engine.transform.samples import sample
 
 __all__ = ["BentSum", "bent_sums"]

@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 
-from engine.arrays import Floats, Ints
+from engine.arrays import EPS, Floats, Ints
 from engine.errors import RefusedError
 from engine.protocols import Model
 from engine.transform import plan_cache
@@ -22,7 +22,7 @@ from engine.transform.kernels import Kernel
 from engine.transform.moments import NOTHING
 from engine.transform.plan import plan_rows
 from engine.transform.reach import Strikes, reach_of
-from engine.transform.record import EPS, RowValues, assemble
+from engine.transform.record import RowValues, assemble
 from engine.transform.rows import Rows, counted_nodes, evaluate
 from engine.transform.window import sums_at
 

@@ -12,11 +12,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from engine.arrays import Floats, Ints
+from engine.arrays import EPS, Floats, Ints
 from engine.protocols import Model
 from engine.transform.kernels import Kernel
 from engine.transform.plan import Plan
-from engine.transform.record import EPS
 from engine.transform.samples import sample
 from engine.transform.window import WINDOW_ERROR, grid_of, inverse_window
 

@@ -23,14 +23,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from engine.arrays import Floats, Ints
+from engine.arrays import EPS, Floats, Ints
 from engine.protocols import Model
 from engine.transform.moments import SideMoments, side_moments
 from engine.transform.reach import Reach
 
 __all__ = ["Plan", "plan_rows"]
 
-EPS = float(np.finfo(np.float64).eps)
 PLAIN_LIMIT = 4096
 SHARE = 0.02  # of the tolerance, for each of aliasing and truncation: leaves room for a value estimate off by 10
 ROUNDING = 200.0  # rounding units a row is assumed to lose at first; the reported bound uses the sums themselves

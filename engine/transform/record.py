@@ -6,11 +6,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from engine.arrays import Floats
+from engine.arrays import EPS, Floats
 
-__all__ = ["EPS", "RowValues", "assemble"]
+__all__ = ["RowValues", "assemble"]
 
-EPS = float(np.finfo(np.float64).eps)
 _SMALLEST = float(np.finfo(np.float64).tiny)
 
 
